@@ -140,7 +140,8 @@ class SequenceMember:
     filling : Fraction
         The filling factor, counted from the base level.
     sequence : str
-        ``"p/(2p+1)"``, ``"p/(2p-1)"``, ``"p/(4p+1)"``, ``"p/(4p-1)"``; a leading ``"1-"`` or ``"2-"`` marks holes.
+        ``"p/(2p+1)"``, ``"p/(2p-1)"``, ``"p/(4p+1)"``, ``"p/(4p-1)"``; a leading ``"1-"`` or ``"2-"`` marks
+        holes.
     p : int
         Number of filled composite-fermion levels.
     sign : int
@@ -158,11 +159,7 @@ class SequenceMember:
     @property
     def field_ratio(self) -> Fraction:
         """Exact ratio B_eff / B, signed."""
-        return Fraction(self.sign, self._denominator)
-
-    @property
-    def _denominator(self) -> int:
-        return self.filling.denominator
+        return Fraction(self.sign, self.filling.denominator)
 
 
 def _plain_member(reduced: Fraction, flux: int) -> tuple[int, int] | None:
@@ -283,4 +280,6 @@ def host(name: str) -> Host:
     for key, value in HOSTS.items():
         if key.lower() == name.lower():
             return value
-    raise InputError(f"unknown host {name!r}; built in are {', '.join(HOSTS)} (or give permittivity yourself)")
+    raise InputError(
+        f"unknown host {name!r}; built in are {', '.join(HOSTS)} (or give permittivity yourself)"
+    )

@@ -11,7 +11,7 @@ from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.constants import Boltzmann, e, electron_mass, epsilon_0, h, hbar, pi, physical_constants
+from scipy.constants import Boltzmann, e, electron_mass, epsilon_0, h, hbar, physical_constants, pi
 
 __all__ = [
     "BOHR_MAGNETON_K_PER_T",
