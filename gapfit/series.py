@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -129,11 +129,14 @@ class TemperatureSeries:
             ExcludedPoint(float(t), float(y), float(s), reason)
             for t, y, s in zip(self.temperature[~keep], self.value[~keep], self.error[~keep], strict=True)
         )
-        kept = {name: _frozen(getattr(self, name)[keep]) for name in _ARRAYS}
-        return replace(self, excluded=self.excluded + gone, **kept)
-
-
-_ARRAYS = ("temperature", "value", "error", "temperature_error")
+        return replace(
+            self,
+            excluded=self.excluded + gone,
+            temperature=_frozen(self.temperature[keep]),
+            value=_frozen(self.value[keep]),
+            error=_frozen(self.error[keep]),
+            temperature_error=_frozen(self.temperature_error[keep]),
+        )
 
 
 def make_series(
@@ -143,7 +146,7 @@ def make_series(
     *,
     filling: Fraction,
     temperature_error: ArrayLike | None = None,
-    **record: object,
+    **record: Any,
 ) -> TemperatureSeries:
     """Checked and sorted temperature series of plain arrays.
 
@@ -177,7 +180,7 @@ def make_series(
     """
     temperature = np.asarray(temperature, dtype=float).ravel()
     value = np.asarray(value, dtype=float).ravel()
-    flags: tuple[str, ...] = tuple(record.pop("flags", ()))  # type: ignore[call-overload]
+    flags: tuple[str, ...] = tuple(record.pop("flags", ()))
     if error is None:
         error = assumed_error(value)
         record["error_source"] = "assumed"
@@ -198,7 +201,7 @@ def make_series(
         error=_frozen(error[order]),
         temperature_error=_frozen(temperature_error[order]),
         flags=tuple(dict.fromkeys(flags)),
-        **record,  # type: ignore[arg-type]
+        **record,
     )
 
 
@@ -207,7 +210,9 @@ def assumed_error(value: FloatArray) -> FloatArray:
 
     Common practice, no source; the fitted inflation corrects their size.
     """
-    return np.hypot(0.02 * value, 0.002 * np.abs(value).max(initial=0.0))
+    largest = float(np.abs(value).max(initial=0.0))
+    error: FloatArray = np.hypot(0.02 * value, 0.002 * largest)
+    return error
 
 
 def _spread(numbers: ArrayLike, size: int, name: str) -> FloatArray:
@@ -257,7 +262,7 @@ def _check_readings(
 
 
 def _check_temperature_unit(temperature: FloatArray, filling: Fraction) -> None:
-    """Refuse temperatures that can only be millikelvins: above 350 K, or a fraction studied only above 15 K."""
+    """Refuse temperatures that must be millikelvins: above 350 K, or a fraction studied above 15 K only."""
     low, high = float(temperature.min(initial=np.inf)), float(temperature.max(initial=0.0))
     if high > HIGHEST_TEMPERATURE_K or (filling.denominator > 1 and low > HIGHEST_FRACTION_START_K):
         raise InputError(

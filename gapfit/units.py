@@ -76,7 +76,8 @@ def magnetic_length(field_T: Value) -> Value:
     -------
     float or ndarray, m
     """
-    return np.sqrt(hbar / (e * np.abs(field_T)))  # type: ignore[return-value]
+    length: Value = np.sqrt(hbar / (e * np.abs(field_T)))
+    return length
 
 
 def coulomb_scale(field_T: Value, permittivity: float) -> Value:
@@ -147,7 +148,8 @@ def dirac_level(index: int, field_T: Value, velocity: float = 1e6) -> Value:
     float or ndarray, K
     """
     scale = np.sign(index) * velocity * np.sqrt(2 * e * hbar * abs(index)) / Boltzmann
-    return scale * np.sqrt(np.abs(field_T))  # type: ignore[return-value]
+    level: Value = scale * np.sqrt(np.abs(field_T))
+    return level
 
 
 def landau_level_mixing(field_T: Value, permittivity: float, mass: float) -> Value:
