@@ -1,0 +1,637 @@
+"""Transport mechanisms: pure functions of temperature, and the table that names their parameters.
+
+A reading is a sum of contributions (mechanisms add in sigma_xx, and in rho_xx as long as rho_xx << rho_xy):
+
+    y(T) = activation (closed at high T by the background) + hopping + nearest-neighbour hopping
+           + leak + offset + gapless level,           all at the electron temperature T_e(T).
+
+Every contribution is described by its size at a reference temperature, so that amplitude and energy decorrelate.
+The state of a model is a vector of *coordinates*, one per row of `PARAMETERS`: the logarithm of positive quantities, the
+quantity itself otherwise. A mechanism that is off has its coordinate where its contribution vanishes (`OFF`), so one
+function, `evaluate`, serves every combination, vectorised over draws and temperatures.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import product
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from gapfit.errors import InputError
+
+__all__ = [
+    "COMBINATIONS",
+    "MECHANISMS",
+    "OFF",
+    "PARAMETERS",
+    "Combination",
+    "Curve",
+    "Parameter",
+    "Reference",
+    "activation",
+    "efros_shklovskii",
+    "electron_temperature",
+    "evaluate",
+    "fermi",
+    "mott",
+    "nearest_neighbour",
+    "parse_combination",
+    "power_mean",
+]
+
+FloatArray = NDArray[np.float64]
+LARGEST_EXPONENT = 600.0
+FAR = 1000.0
+
+
+# ------------------------------------------------------------------------------------------------- the laws
+
+
+def activation(temperature: ArrayLike, gap: ArrayLike, prefactor: ArrayLike) -> FloatArray:
+    """Thermal activation, rho_0 exp(-Delta / 2 k_B T).
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Electron temperature.
+    gap : array_like, K
+        Gap Delta; the activation energy is half of it.
+    prefactor : array_like, ohm or S
+        Value at 1/T = 0.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    temperature, gap = np.asarray(temperature, float), np.asarray(gap, float)
+    return np.asarray(prefactor) * np.exp(-gap / (2 * temperature))
+
+
+def fermi(temperature: ArrayLike, gap: ArrayLike, amplitude: ArrayLike) -> FloatArray:
+    """Fermi form, 2 A / (1 + exp(Delta / 2 k_B T)).
+
+    It is the power mean of sharpness 1 of an activation with prefactor 2 A and a background 2 A.
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Electron temperature.
+    gap : array_like, K
+        Gap Delta.
+    amplitude : array_like, ohm or S
+        Value A approached at high temperature.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    argument = np.asarray(gap, float) / (2 * np.asarray(temperature, float))
+    return 2 * np.asarray(amplitude) / (1 + np.exp(np.minimum(argument, LARGEST_EXPONENT)))
+
+
+def power_mean(activated: ArrayLike, background: ArrayLike, sharpness: ArrayLike) -> FloatArray:
+    """Closure at high temperature, 1/y^k = 1/activated^k + 1/background^k.
+
+    Sharpness k = 1 is the series limit. The power mean follows tanh, 1 - exp and arctan roll-overs closely, but none
+    of them is exact for a real sample.
+
+    Parameters
+    ----------
+    activated : array_like, ohm or S
+        Activated contribution, above zero.
+    background : array_like, ohm or S
+        Level that the flanks of the minimum approach, above zero.
+    sharpness : array_like
+        Exponent k > 0.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    k = np.asarray(sharpness, float)
+    return np.exp(-np.logaddexp(-k * np.log(activated), -k * np.log(background)) / k)
+
+
+def efros_shklovskii(
+    temperature: ArrayLike, hopping_temperature: ArrayLike, amplitude: ArrayLike, power: float = 1.0
+) -> FloatArray:
+    """Efros-Shklovskii hopping, (s / T^m) exp[-(T_0/T)^(1/2)].
+
+    Efros & Shklovskii, J. Phys. C 8, L49 (1975).
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Electron temperature.
+    hopping_temperature : array_like, K
+        T_0.
+    amplitude : array_like, ohm K^m or S K^m
+        s.
+    power : float
+        Power m of the prefactor, 1 by custom in the quantum Hall literature, 0 also used.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    return _hopping(temperature, hopping_temperature, amplitude, power, 1 / 2)
+
+
+def mott(
+    temperature: ArrayLike, hopping_temperature: ArrayLike, amplitude: ArrayLike, power: float = 1.0
+) -> FloatArray:
+    """Mott hopping in two dimensions, (s / T^m) exp[-(T_M/T)^(1/3)].
+
+    Mott, Philos. Mag. 19, 835 (1969).
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Electron temperature.
+    hopping_temperature : array_like, K
+        T_M.
+    amplitude : array_like, ohm K^m or S K^m
+        s.
+    power : float
+        Power m of the prefactor.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    return _hopping(temperature, hopping_temperature, amplitude, power, 1 / 3)
+
+
+def _hopping(
+    temperature: ArrayLike, scale: ArrayLike, amplitude: ArrayLike, power: float, exponent: float
+) -> FloatArray:
+    temperature = np.asarray(temperature, float)
+    return (
+        np.asarray(amplitude) / temperature**power * np.exp(-((np.asarray(scale) / temperature) ** exponent))
+    )
+
+
+def nearest_neighbour(temperature: ArrayLike, energy: ArrayLike, prefactor: ArrayLike) -> FloatArray:
+    """Nearest-neighbour hopping, s exp(-E_3 / k_B T).
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Electron temperature.
+    energy : array_like, K
+        E_3, well below half the gap.
+    prefactor : array_like, ohm or S
+        Value at 1/T = 0.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    return np.asarray(prefactor) * np.exp(-np.asarray(energy, float) / np.asarray(temperature, float))
+
+
+def electron_temperature(temperature: ArrayLike, saturation: ArrayLike, exponent: float = 4.0) -> FloatArray:
+    """Electron temperature, (T^n + T_0^n)^(1/n).
+
+    Parameters
+    ----------
+    temperature : array_like, K
+        Bath temperature.
+    saturation : array_like, K
+        T_0, at which the electrons stop cooling.
+    exponent : float
+        n, from 2 (cooling through the leads) over 4 (T_e ~ I^0.5: Chow et al., Phys. Rev. Lett. 77, 1143 (1996)) to 6.
+
+    Returns
+    -------
+    ndarray, K
+    """
+    n = exponent
+    return (np.asarray(temperature, float) ** n + np.asarray(saturation, float) ** n) ** (1 / n)
+
+
+# ------------------------------------------------------------------------------------------------ the table
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """One row of the parameter table.
+
+    Attributes
+    ----------
+    name : str
+        Column name, with the unit where it has a fixed one.
+    symbol : str
+        Symbol as mathtext.
+    unit : str
+        Unit of the natural value; ``"reading"`` means ohm or S.
+    meaning : str
+        One line for reports.
+    scale : {"log", "linear", "quarter"}
+        How the coordinate x becomes the natural value: exp(x), x, or 1/(4 (1 + exp(-x))).
+    off : float
+        Coordinate at which the contribution vanishes.
+    """
+
+    name: str
+    symbol: str
+    unit: str
+    meaning: str
+    scale: str
+    off: float
+
+    def natural(self, coordinate: FloatArray) -> FloatArray:
+        """Natural value of a coordinate."""
+        if self.scale == "log":
+            return np.exp(np.clip(coordinate, -LARGEST_EXPONENT, LARGEST_EXPONENT))
+        if self.scale == "quarter":
+            return 0.25 / (1 + np.exp(-np.clip(coordinate, -LARGEST_EXPONENT, LARGEST_EXPONENT)))
+        return coordinate
+
+
+PARAMETERS: tuple[Parameter, ...] = (
+    Parameter("gap_K", r"$\Delta$", "K", "gap, in exp(-gap / 2T)", "log", -FAR),
+    Parameter(
+        "activated", r"$y_a(T_h)$", "reading", "activated contribution at the high reference", "log", -FAR
+    ),
+    Parameter("background", r"$y_{bg}$", "reading", "level that the minimum fills up to", "log", FAR),
+    Parameter("sharpness", r"$k$", "", "sharpness of the roll-over", "log", 0.0),
+    Parameter("hopping", r"$y_h(T_l)$", "reading", "hopping contribution at the low reference", "log", -FAR),
+    Parameter("hopping_T0_K", r"$T_{hop}$", "K", "hopping temperature", "log", 0.0),
+    Parameter("hopping_exponent", r"$\alpha$", "", "1/2 Efros-Shklovskii, 1/3 Mott (fixed)", "linear", 0.5),
+    Parameter(
+        "nearest", r"$y_3(T_l)$", "reading", "nearest-neighbour hopping at the low reference", "log", -FAR
+    ),
+    Parameter("nearest_ratio", r"$E_3/\Delta$", "", "nearest-neighbour energy over gap", "quarter", 0.0),
+    Parameter("leak", r"$y_{leak}$", "reading", "leak, a constant above zero", "log", -FAR),
+    Parameter("offset", r"$y_{off}$", "reading", "instrument offset, signed", "linear", 0.0),
+    Parameter("electron_T0_K", r"$T_0$", "K", "temperature at which electrons stop cooling", "log", -FAR),
+    Parameter("level", r"$y_{flat}$", "reading", "gapless level at the low reference", "log", -FAR),
+    Parameter("power", r"$p$", "", "power of temperature of the gapless level", "linear", 0.0),
+    Parameter("spread", r"$s/\Delta$", "", "relative spread of local gaps", "log", -FAR),
+    Parameter("inflation", r"$f$", "", "standard errors are multiplied by this", "log", 0.0),
+)
+"""Every parameter that a model can have, in the order of the coordinate vector."""
+
+SLOT: dict[str, int] = {parameter.name: index for index, parameter in enumerate(PARAMETERS)}
+OFF: FloatArray = np.array([parameter.off for parameter in PARAMETERS])
+"""Coordinate vector of a model in which every mechanism is off."""
+
+_G, _A, _B, _K, _H, _HT, _HX, _N, _NR, _L, _O, _E, _F, _P, _S, _I = range(len(PARAMETERS))
+
+MECHANISMS: dict[str, tuple[str, ...]] = {
+    "activation": ("gap_K", "activated"),
+    "roll-over": ("background", "sharpness"),
+    "fermi": (),
+    "spread": ("spread",),
+    "es": ("hopping", "hopping_T0_K"),
+    "mott": ("hopping", "hopping_T0_K"),
+    "nearest": ("nearest", "nearest_ratio"),
+    "leak": ("leak",),
+    "offset": ("offset",),
+    "heating": ("electron_T0_K",),
+    "constant": ("level",),
+    "power law": ("level", "power"),
+}
+"""Parameters of each mechanism, by the key that study files use."""
+
+_WORDS = {
+    "activation": "activation",
+    "roll-over": "roll-over",
+    "fermi": "Fermi form",
+    "spread": "spread of gaps",
+    "es": "ES hopping",
+    "mott": "Mott hopping",
+    "nearest": "nearest-neighbour hopping",
+    "leak": "leak",
+    "offset": "offset",
+    "heating": "electron heating",
+    "constant": "constant",
+    "power law": "power law",
+}
+_NEEDS_ACTIVATION = {"roll-over", "fermi", "spread", "nearest"}
+_CARRIERS = {"activation", "es", "mott", "constant", "power law"}
+_EXCLUSIVE = ({"roll-over", "fermi"}, {"es", "mott"}, {"leak", "offset"}, {"constant", "power law", "activation"})
+
+
+@dataclass(frozen=True)
+class Combination:
+    """A set of mechanisms that together make a curve.
+
+    Attributes
+    ----------
+    mechanisms : tuple of str
+        Keys of `MECHANISMS`, in the order of that table.
+
+    Raises
+    ------
+    InputError
+        If a mechanism is unknown, if two exclude each other, or if nothing carries the curve.
+    """
+
+    mechanisms: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        unknown = [name for name in self.mechanisms if name not in MECHANISMS]
+        if unknown:
+            raise InputError(f"unknown mechanism {unknown[0]!r}; allowed are {', '.join(MECHANISMS)}")
+        ordered = tuple(name for name in MECHANISMS if name in self.mechanisms)
+        object.__setattr__(self, "mechanisms", ordered)
+        present = set(ordered)
+        for group in _EXCLUSIVE:
+            if len(group & present) > 1:
+                raise InputError(f"mechanisms {' and '.join(sorted(group & present))} exclude each other")
+        if not present & _CARRIERS:
+            raise InputError(f"a combination needs one of {', '.join(sorted(_CARRIERS))}")
+        if "activation" not in present and present & _NEEDS_ACTIVATION:
+            raise InputError(f"{sorted(present & _NEEDS_ACTIVATION)[0]} makes sense with activation only")
+
+    @property
+    def name(self) -> str:
+        """Key such as ``"activation + es + leak"``, as `parse_combination` reads it."""
+        return " + ".join(self.mechanisms)
+
+    @property
+    def label(self) -> str:
+        """Words for figures and reports."""
+        return " + ".join(_WORDS[name] for name in self.mechanisms)
+
+    @property
+    def activated(self) -> bool:
+        """Whether the combination has a gap."""
+        return "activation" in self.mechanisms
+
+    @property
+    def tied(self) -> bool:
+        """Whether the background is tied to the prefactor (Fermi form)."""
+        return "fermi" in self.mechanisms
+
+    @property
+    def hopping(self) -> str:
+        """``"es"``, ``"mott"`` or the empty string."""
+        return next((name for name in ("es", "mott") if name in self.mechanisms), "")
+
+    @property
+    def n_nuisance(self) -> int:
+        """Number of mechanisms beyond the one that carries the curve."""
+        return len(self.mechanisms) - 1
+
+    @property
+    def slots(self) -> NDArray[np.intp]:
+        """Positions of the fitted parameters in the coordinate vector, noise inflation last."""
+        names = [name for key in self.mechanisms for name in MECHANISMS[key]]
+        return np.array([SLOT[name] for name in names] + [_I], dtype=np.intp)
+
+    @property
+    def base(self) -> FloatArray:
+        """Coordinate vector with every mechanism off and the hopping exponent of this combination."""
+        coordinates = OFF.copy()
+        if self.tied:
+            coordinates[_B] = np.nan
+        if self.hopping == "mott":
+            coordinates[_HX] = 1 / 3
+        return coordinates
+
+
+def parse_combination(text: str) -> Combination:
+    """Combination of a text such as ``"activation + roll-over + es"``.
+
+    Raises
+    ------
+    InputError
+        As `Combination`.
+    """
+    return Combination(tuple(part.strip() for part in text.lower().split("+")))
+
+
+def _default_combinations() -> tuple[Combination, ...]:
+    activated = [
+        ("activation", *closure, *tail, *extra, *heat)
+        for closure, tail, extra, heat in product(
+            ((), ("roll-over",)),
+            ((), ("es",), ("mott",)),
+            ((), ("leak",), ("offset",)),
+            ((), ("heating",)),
+        )
+    ]
+    gapless = [
+        (carrier, *extra)
+        for carrier, extra in product(("es", "mott"), ((), ("leak",), ("offset",), ("heating",)))
+    ]
+    gapless += [("constant",), ("power law",), ("power law", "leak"), ("power law", "offset")]
+    return tuple(Combination(names) for names in (*activated, *gapless))
+
+
+COMBINATIONS: tuple[Combination, ...] = _default_combinations()
+"""The combinations that are averaged by default."""
+
+
+# --------------------------------------------------------------------------------------------- the full curve
+
+
+@dataclass(frozen=True)
+class Reference:
+    """Reference temperatures and fixed exponents of a model.
+
+    Attributes
+    ----------
+    high_K : float, K
+        Where the activated contribution is quoted.
+    low_K : float, K
+        Where hopping and the gapless level are quoted.
+    hopping_power : float
+        Power m of the hopping prefactor 1/T^m.
+    saturation_exponent : float
+        n of the electron temperature.
+    """
+
+    high_K: float
+    low_K: float
+    hopping_power: float = 1.0
+    saturation_exponent: float = 4.0
+
+
+@dataclass(frozen=True)
+class Curve:
+    """Curves of a batch of models and their derivatives.
+
+    Attributes
+    ----------
+    total : ndarray[n_draw, n_temperature], ohm or S
+    slope : ndarray[n_draw, n_temperature], ohm or S
+        d total / d ln T.
+    parts : dict of str to ndarray[n_draw, n_temperature], ohm or S
+        ``activation`` (closed), ``hopping``, ``nearest``, ``constant`` (leak, offset and level).
+    jacobian : ndarray[n_draw, n_temperature, n_parameter] or None
+        d total / d coordinate.
+    """
+
+    total: FloatArray
+    slope: FloatArray
+    parts: dict[str, FloatArray]
+    jacobian: FloatArray | None = None
+
+
+def log_prefactor(coordinates: FloatArray, reference: Reference) -> FloatArray:
+    """Logarithm of the activated prefactor at 1/T = 0.
+
+    Parameters
+    ----------
+    coordinates : ndarray[n_draw, n_parameter]
+    reference : Reference
+
+    Returns
+    -------
+    ndarray[n_draw]
+        ln of ohm or S.
+    """
+    gap = _exp(coordinates[:, _G])
+    spread = gap * _exp(coordinates[:, _S])
+    return np.asarray(
+        coordinates[:, _A] + gap / (2 * reference.high_K) - spread**2 / (8 * reference.high_K**2)
+    )
+
+
+def evaluate(
+    coordinates: FloatArray, temperature: FloatArray, reference: Reference, jacobian: bool = False
+) -> Curve:
+    """Curves of a batch of models.
+
+    Parameters
+    ----------
+    coordinates : ndarray[n_draw, n_parameter]
+        Coordinate vectors; a background of NaN is tied to the prefactor (Fermi form).
+    temperature : ndarray[n_temperature], K
+        Bath temperatures.
+    reference : Reference
+        Reference temperatures and exponents.
+    jacobian : bool
+        Whether to return derivatives by the coordinates too.
+
+    Returns
+    -------
+    Curve
+
+    Notes
+    -----
+    Exponents are capped at 600 so that absurd draws give absurdly large finite readings, not overflow.
+    """
+    x = coordinates[:, :, None]
+    tied = np.isnan(coordinates[:, _B])
+    if tied.any():
+        x = x.copy()
+        x[tied, _B, 0] = log_prefactor(coordinates[tied], reference)
+    hot, q = _electrons(x[:, _E], temperature, reference)
+    columns: dict[int, FloatArray] = {}
+    active, d_active = _activated(x, hot, reference, columns)
+    hop, d_hop = _variable_range(x, hot, reference, columns)
+    near, d_near = _nearest(x, hot, reference, columns)
+    level, d_level = _level(x, hot, reference, columns)
+    leak = _exp(x[:, _L])
+    constant = leak + x[:, _O] + level
+    by_electrons = d_active + d_hop + d_near + d_level
+    total = active + hop + near + constant
+    parts = {"activation": active, "hopping": hop, "nearest": near, "constant": constant + 0 * total}
+    slope = by_electrons * (1 - q)
+    if not jacobian:
+        return Curve(total, slope, parts)
+    columns |= {_L: leak, _O: np.ones_like(leak), _E: by_electrons * q}
+    matrix = np.zeros((*total.shape, len(PARAMETERS)))
+    for slot, column in columns.items():
+        matrix[:, :, slot] = column
+    if tied.any():
+        _tie_background(matrix, x, tied, reference)
+    return Curve(total, slope, parts, matrix)
+
+
+def _exp(exponent: FloatArray) -> FloatArray:
+    return np.exp(np.minimum(exponent, LARGEST_EXPONENT))
+
+
+def _electrons(log_t0: FloatArray, temperature: FloatArray, reference: Reference) -> tuple[FloatArray, FloatArray]:
+    """Electron temperature and d ln T_e / d ln T_0."""
+    if (log_t0 <= -FAR).all():
+        return temperature[None, :], np.zeros((1, 1))
+    n = reference.saturation_exponent
+    excess = _exp(n * (log_t0 - np.log(temperature)))
+    return temperature * (1 + excess) ** (1 / n), excess / (1 + excess)
+
+
+def _activated(
+    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
+) -> tuple[FloatArray, FloatArray]:
+    """Activated contribution with closure, and its derivative by ln T_e."""
+    half = _exp(x[:, _G]) / 2
+    variance = (2 * half * _exp(x[:, _S])) ** 2 / 4
+    inverse = 1 / hot
+    by_gap = -half * (inverse - 1 / reference.high_K) + variance * (inverse**2 - 1 / reference.high_K**2)
+    by_spread = variance * (inverse**2 - 1 / reference.high_K**2)
+    log_active = np.minimum(x[:, _A] + by_gap - by_spread / 2, LARGEST_EXPONENT)
+    background, k = x[:, _B], _exp(x[:, _K])
+    if (background >= FAR).all():
+        value, share = np.exp(log_active), np.ones((1, 1))
+    else:
+        difference = k * (log_active - background)
+        share = 1 / (1 + _exp(difference))
+        log_value = background - np.logaddexp(0.0, -difference) / k
+        value = np.exp(log_value)
+        columns[_B] = value * (1 - share)
+        columns[_K] = value * (background - log_value + share * (log_active - background))
+    columns |= {_G: value * share * by_gap, _A: value * share, _S: value * share * by_spread}
+    return value, value * share * (half * inverse - variance * inverse**2)
+
+
+def _variable_range(
+    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
+) -> tuple[FloatArray, FloatArray]:
+    """Variable-range hopping and its derivative by ln T_e."""
+    if (x[:, _H] <= -FAR).all():
+        return np.zeros((1, 1)), np.zeros((1, 1))
+    m, alpha = reference.hopping_power, x[:, _HX]
+    at_low = _exp(alpha * (x[:, _HT] - np.log(reference.low_K)))
+    at_hot = _exp(alpha * (x[:, _HT] - np.log(hot)))
+    value = _exp(x[:, _H] - (at_hot - at_low) - m * np.log(hot / reference.low_K))
+    columns |= {_H: value, _HT: -value * alpha * (at_hot - at_low)}
+    return value, value * (alpha * at_hot - m)
+
+
+def _nearest(
+    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
+) -> tuple[FloatArray, FloatArray]:
+    """Nearest-neighbour hopping and its derivative by ln T_e."""
+    if (x[:, _N] <= -FAR).all():
+        return np.zeros((1, 1)), np.zeros((1, 1))
+    logistic = 1 / (1 + np.exp(-np.clip(x[:, _NR], -LARGEST_EXPONENT, LARGEST_EXPONENT)))
+    energy = _exp(x[:, _G]) * logistic / 4
+    by_energy = -energy * (1 / hot - 1 / reference.low_K)
+    value = _exp(x[:, _N] + by_energy)
+    columns |= {_N: value, _NR: value * by_energy * (1 - logistic)}
+    columns[_G] = columns[_G] + value * by_energy
+    return value, value * energy / hot
+
+
+def _level(
+    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
+) -> tuple[FloatArray, FloatArray]:
+    """Gapless level with a power of temperature, and its derivative by ln T_e."""
+    if (x[:, _F] <= -FAR).all():
+        return np.zeros((1, 1)), np.zeros((1, 1))
+    ratio = np.log(hot / reference.low_K)
+    value = _exp(x[:, _F] + x[:, _P] * ratio)
+    columns |= {_F: value, _P: value * ratio}
+    return value, value * x[:, _P]
+
+
+def _tie_background(
+    matrix: FloatArray, x: FloatArray, tied: NDArray[np.bool_], reference: Reference
+) -> None:
+    """Carry the derivative by the tied background over to gap and amplitude, in place."""
+    through = matrix[tied, :, _B]
+    gap = _exp(x[tied, _G])
+    variance = (gap * _exp(x[tied, _S])) ** 2 / 4 / reference.high_K**2
+    matrix[tied, :, _A] += through
+    matrix[tied, :, _G] += through * (gap / (2 * reference.high_K) - variance)
+    matrix[tied, :, _S] -= through * variance
+    matrix[tied, :, _B] = 0.0
