@@ -9,7 +9,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from fractions import Fraction
-from itertools import pairwise
 
 import numpy as np
 
@@ -68,23 +67,34 @@ class HallBar:
     field_limit_T: float = 14.0
 
 
+# flanks are no straight line: a dip of composite fermions at 1/2, and peaks beside the strong states
+_SWELLS = (
+    (0.5, -0.08, 0.03),
+    (0.368, 0.3, 0.014),
+    (0.632, 0.2, 0.014),
+    (0.86, 0.5, 0.07),
+    (1.17, 0.4, 0.09),
+    (1.5, -0.12, 0.12),
+    (2.4, 0.3, 0.3),
+)
+
 HAREBELL_3 = HallBar(
     density_per_m2=1.12e15 * (1 - 0.004),
     mass=0.5,
     broadening_K=1.5,
     integer_gap_K=12.0,
     hopping_scale=1.0,
-    flanks=Background(11.2, 36.0, 1.4, slope_per_K=-0.05, half_dip=0.06, dingle_K=0.45),
+    flanks=Background(11.2, 36.0, 1.4, slope_per_K=-0.05, bumps=_SWELLS, dingle_K=0.45),
     line=Instrument(
         current_A=1e-8,
         aspect=4.0,
         hall_into_xx=1.1e-3,
         xx_into_hall=-4e-3,
         offset_V=2e-9,
-        noise_V=8e-9,
+        noise_V=5e-9,
         hall_noise_V=3e-8,
         relative_noise=4e-3,
-        gain_spread=3e-3,
+        gain_spread=2e-3,
         correlation=1.5,
         step_V=2e-9,
         hall_step_V=1e-8,
@@ -92,10 +102,10 @@ HAREBELL_3 = HallBar(
         remanence_T=1.5e-3,
         lag_T=2.5e-3,
         temperature_scale=3e-3,
-        temperature_spread=3e-3,
+        temperature_spread=2.5e-3,
         temperature_drift=4e-3,
     ),
-    temperatures_K=(0.06, 0.095, 0.145, 0.21, 0.3, 0.4, 0.51, 0.64, 0.79, 0.96, 1.15, 1.36, 1.6),
+    temperatures_K=(0.06, 0.1, 0.16, 0.25, 0.36, 0.48, 0.6, 0.74, 0.89, 1.05, 1.22, 1.4, 1.6),
 )
 
 HAREBELL_4 = HallBar(
@@ -104,13 +114,13 @@ HAREBELL_4 = HallBar(
     broadening_K=1.9,
     integer_gap_K=9.0,
     hopping_scale=2.5,
-    flanks=Background(38.0, 46.0, 1.35, slope_per_K=-0.04, half_dip=0.04, dingle_K=0.8),
+    flanks=Background(38.0, 46.0, 1.35, slope_per_K=-0.04, bumps=_SWELLS, dingle_K=0.8),
     line=replace(
         HAREBELL_3.line,
         hall_into_xx=-2.3e-3,
         xx_into_hall=6e-3,
         offset_V=-3e-9,
-        noise_V=1.4e-8,
+        noise_V=1e-8,
         relative_noise=5e-3,
         remanence_T=-1e-3,
         lag_T=3.5e-3,
@@ -121,7 +131,7 @@ HAREBELL_4 = HallBar(
 
 # filling: share of the prefactor (h/e^2)/p^2, hopping temperature (K), hopping amplitude (ohm K)
 _HAREBELL_TABLE = {
-    "1/3": (0.35, 20.0, 200.0),
+    "1/3": (0.6, 20.0, 60.0),
     "2/5": (0.45, 10.0, 60.0),
     "3/7": (0.7, 6.0, 25.0),
     "4/9": (1.2, 4.0, 12.0),
@@ -133,35 +143,38 @@ _HAREBELL_TABLE = {
     "2/3": (0.4, 11.0, 50.0),
     "5/7": (0.8, 2.0, 8.0),
     "4/5": (0.6, 3.0, 10.0),
-    "1": (0.3, 30.0, 300.0),
+    "1": (0.7, 30.0, 50.0),
     "4/3": (0.5, 4.0, 10.0),
     "5/3": (0.5, 3.0, 8.0),
     "2": (0.3, 60.0, 60.0),
     "3": (0.4, 12.0, 20.0),
     "4": (0.4, 30.0, 40.0),
     "5": (0.6, 5.0, 10.0),
-    "6": (0.6, 15.0, 20.0),
 }
 # gaps off the ladder, K
-_HAREBELL_GAPS = {"4/5": 0.8, "5/7": 0.35, "2": 40.0, "3": 3.2, "4": 16.0, "5": 1.0, "6": 8.0}
+_HAREBELL_GAPS = {"4/5": 0.8, "5/7": 0.35, "2": 40.0, "3": 3.2, "4": 16.0, "5": 1.0}
 
 
 def _reach_limit(filling: Fraction) -> float:
     """Largest reach of a plateau: shorter for larger denominators, as along the ladder."""
     q = filling.denominator
     if q == 1:
-        return 0.11 if abs(filling) == 1 else 0.25
-    return min(0.035 if abs(filling) < 1 else 0.06, 0.55 / (q * (q - 2)))
+        return 0.14 if abs(filling) == 1 else 0.4
+    return min(0.035 if abs(filling) < 1 else 0.06, 1.2 / (q * (q - 2)))
 
 
 def _reaches(fillings: list[Fraction]) -> dict[Fraction, tuple[float, float]]:
-    """Reach below and above each filling: half way to the neighbour, or the limit."""
+    """Reach below and above each filling: about half way to the neighbour, or the limit.
+
+    Plateaus of the highest denominators overlap a little; none reaches a neighbour's exact filling.
+    """
     walls = [Fraction(-99), *sorted(fillings), Fraction(99)]
-    half = {pair: 0.5 * float(pair[1] - pair[0]) for pair in pairwise(walls)}
-    return {
-        here: (min(half[below, here], _reach_limit(here)), min(half[here, above], _reach_limit(here)))
-        for below, here, above in zip(walls, walls[1:], walls[2:], strict=False)
-    }
+    reaches = {}
+    for below, here, above in zip(walls, walls[1:], walls[2:], strict=False):
+        share = 0.5 if here.denominator < 9 else 0.62
+        room = (share * float(here - below), share * float(above - here))
+        reaches[here] = (min(room[0], _reach_limit(here)), min(room[1], _reach_limit(here)))
+    return reaches
 
 
 def _flank(filling: Fraction, field_T: float, shape: Background) -> float:
@@ -217,7 +230,14 @@ def harebell_states(sample: HallBar) -> tuple[StateTruth, ...]:
 
 
 CAMPION_BACKGROUND = Background(
-    350.0, 130.0, 1.0, slope_per_K=0.004, insulating_ohm=4000.0, insulating_K=8.0, puddles=0.03
+    zero_field_ohm=260.0,
+    rise_ohm=95.0,
+    rise_power=1.0,
+    slope_per_K=0.004,
+    bumps=((0.0, 0.9, 0.9), (0.5, -0.1, 0.05), (0.82, 0.3, 0.06), (1.17, 0.25, 0.06), (1.8, 0.4, 0.12)),
+    insulating_ohm=4000.0,
+    insulating_K=8.0,
+    puddles=0.06,
 )
 CAMPION_FIELDS_T = (6.0, 9.0, 12.0, 14.0)
 CAMPION_TEMPERATURES_K = (0.3, 0.55, 0.9, 1.4, 2.1, 3.1, 4.5, 6.5, 9.5, 14.0, 20.0)
@@ -302,7 +322,7 @@ def teasel_states() -> tuple[tuple[float, StateTruth], ...]:
     es = "efros-shklovskii"
     return (
         (12.9, StateTruth(Fraction(1, 3), 6.2, 0.4 * one)),
-        (6.45, StateTruth(Fraction(2, 3), 4.5, 0.5 * one / 4, es, 120.0, 10.0)),
+        (6.45, StateTruth(Fraction(2, 3), 4.5, 0.5 * one / 4, es, 300.0, 10.0)),
         (10.75, StateTruth(Fraction(2, 5), 0.0, 0.0, es, 800.0, 12.0)),
         (7.17, StateTruth(Fraction(3, 5), 3.2, 0.7 * one / 9, leak_ohm=14.0)),
         (10.03, StateTruth(Fraction(3, 7), 2.7, 1.1 * one / 9, background_ohm=900.0, rollover="tanh")),

@@ -17,6 +17,7 @@ from fractions import Fraction
 import numpy as np
 from numpy.typing import NDArray
 from scipy.constants import pi
+from scipy.special import i0
 
 from gapfit.errors import InputError
 from gapfit.units import CYCLOTRON_K_PER_T, VON_KLITZING_OHM
@@ -211,12 +212,13 @@ def _unlimited(temperature: FloatArray, truth: StateTruth, position: FloatArray 
     Gap and hopping temperature close as (1 - x^2)^2 with the position x across the plateau, and the
     resistivity grows without limit towards its edge, where the background takes over.
     """
-    core = (1 - np.square(position)) ** 2
+    edge = 1 - np.square(position)
+    core = edge**2
     hot = electron_temperature(temperature, truth.electron_T0_K)
     thermal = activated(hot, truth.gap_K * core, truth.prefactor_ohm)
     power = HOPPING_POWERS[truth.hopping]
     tail = hopping(hot, truth.hopping_amplitude_ohm_K, truth.hopping_T0_K * core, power)
-    return (thermal + tail) / core
+    return (thermal + tail) / edge
 
 
 def temperature_curve(temperature: FloatArray, truth: StateTruth) -> FloatArray:
@@ -253,8 +255,8 @@ class Background:
         Growth with field.
     slope_per_K : float, 1/K
         Relative change with temperature.
-    half_dip : float
-        Relative depth of the broad dip at half filling.
+    bumps : tuple of (float, float, float)
+        Centre in absolute filling factor, relative height (negative for a dip) and width of Gaussian swells.
     insulating_ohm, insulating_K : float, ohm and K
         Height and temperature scale of the insulating ridge at charge neutrality.
     puddles : float
@@ -269,7 +271,7 @@ class Background:
     rise_ohm: float
     rise_power: float
     slope_per_K: float = 0.0
-    half_dip: float = 0.0
+    bumps: tuple[tuple[float, float, float], ...] = ()
     insulating_ohm: float = 0.0
     insulating_K: float = 0.0
     puddles: float = 0.0
@@ -311,7 +313,7 @@ def shubnikov_de_haas(
 def background(
     filling: FloatArray, field_T: FloatArray, temperature: FloatArray, shape: Background
 ) -> FloatArray:
-    """Resistivity of the flanks: rise with field, dip at half filling, neutrality ridge, low-field oscillations.
+    """Resistivity of the flanks: rise with field, swells, neutrality ridge, low-field oscillations.
 
     Parameters
     ----------
@@ -330,7 +332,8 @@ def background(
     """
     smooth = shape.zero_field_ohm + shape.rise_ohm * np.abs(field_T) ** shape.rise_power
     smooth = smooth * (1 + shape.slope_per_K * temperature)
-    smooth = smooth * (1 - shape.half_dip * np.exp(-(((np.abs(filling) - 0.5) / 0.025) ** 2)))
+    for centre, height, width in shape.bumps:
+        smooth = smooth * (1 + height * np.exp(-(((np.abs(filling) - centre) / width) ** 2)))
     ridge = np.exp(shape.insulating_K / (temperature + 0.2 * shape.insulating_K) - (filling / 0.07) ** 2)
     if np.isinf(shape.dingle_K):
         return smooth + shape.insulating_ohm * ridge
@@ -340,10 +343,13 @@ def background(
 def _oscillation(
     filling: FloatArray, field_T: FloatArray, temperature: FloatArray, shape: Background
 ) -> FloatArray:
-    """Spin-degenerate oscillation, faded out where the integer states of the landscape take over."""
-    amplitude = shubnikov_de_haas(field_T, temperature, shape.mass, shape.dingle_K)
+    """Spin-degenerate oscillation, faded out where spin-split states take over.
+
+    1 - A cos(pi nu) for small amplitudes A; positive, with sharp peaks, for large ones.
+    """
     level = np.minimum(np.abs(filling), 1e4)
-    return np.exp(-amplitude / (1 + (6.5 / level) ** 12) * np.cos(pi * level))
+    amplitude = shubnikov_de_haas(field_T, temperature, shape.mass, shape.dingle_K) / (1 + (3.5 / level) ** 12)
+    return np.exp(-amplitude * np.cos(pi * level)) / i0(amplitude)
 
 
 def trace(

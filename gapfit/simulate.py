@@ -213,10 +213,12 @@ def _field_axis(limit_T: float, coarse: int) -> FloatArray:
     return np.concatenate([-half[:0:-1], half])
 
 
-def _kept_rows(n_point: int, rng: np.random.Generator) -> FloatArray:
-    """Rows that reach the file: a few are lost when the lock-in changes its range."""
-    kept = np.ones(n_point, dtype=bool)
-    for start in rng.integers(0, n_point, size=3):
+def _kept_rows(signal: FloatArray, rng: np.random.Generator) -> NDArray[np.intp]:
+    """Rows that reach the file: a few are lost on steep flanks, where the lock-in changes its range."""
+    kept = np.ones(len(signal), dtype=bool)
+    steepness = np.abs(np.gradient(signal))
+    steep = np.flatnonzero(steepness > np.quantile(steepness, 0.9))
+    for start in rng.choice(steep, size=4, replace=False):
         kept[start : start + rng.integers(2, 5)] = False
     return np.flatnonzero(kept)
 
@@ -232,7 +234,7 @@ def _field_sweep(
     filling = filling_factor(sample.density_per_m2, np.abs(field_T))
     rho_xx, rho_xy = trace(filling, field_T, temperature, harebell_states(sample), sample.flanks)
     columns = [reading_T, read_K, *voltages(rho_xx, rho_xy, line, rng)]
-    kept = _kept_rows(len(field_T), rng)
+    kept = _kept_rows(columns[2], rng)
     return [column[kept] for column in columns]
 
 
