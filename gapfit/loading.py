@@ -1,0 +1,503 @@
+"""From the tables of raw files to sweeps: columns, units, currents, and where one sweep ends."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import PurePath
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gapfit.columns import (
+    ColumnRule,
+    Table,
+    kind_of_name,
+    looks_like_magnitude,
+    parse_unit,
+    resolved_unit,
+    take,
+    unit_notice,
+    units_of,
+)
+from gapfit.errors import FileError, InputError, NotEnoughData
+from gapfit.passes import digit, gap_segments, merged, passes, plateau_edges
+from gapfit.series import HIGHEST_TEMPERATURE_K
+from gapfit.traces import (
+    FromName,
+    FromTable,
+    Sweep,
+    TraceFamily,
+    TraceSettings,
+    corbino_conductivity,
+)
+
+__all__ = ["file_temperatures", "load_sweeps"]
+
+FloatArray = NDArray[np.float64]
+LEAST_ROWS = 12
+TEMPERATURE_STEP = 0.04
+FIXED_STEP = 0.01
+CURRENT_STEP = 0.05
+SAME_TEMPERATURE = 0.03
+SAME_TEMPERATURE_ACROSS_FILES = 0.01
+
+
+@dataclass(frozen=True, eq=False)
+class _Record:
+    """The columns of one file in house units, before it is cut into sweeps."""
+
+    table: Table
+    abscissa: FloatArray
+    field_T: FloatArray
+    gate_V: FloatArray
+    density: FloatArray
+    temperature: FloatArray
+    signal: FloatArray
+    quantity: Literal["rho_xx", "sigma_xx"]
+    hall: FloatArray | None
+    quadrature: FloatArray | None
+    current: FloatArray
+    contacts: NDArray[np.str_]
+    column: str | int
+
+
+def load_sweeps(tables: Sequence[Table], settings: TraceSettings) -> TraceFamily:
+    """All sweeps of some raw files, each cut into monotone passes of one field direction.
+
+    Parameters
+    ----------
+    tables : sequence of Table
+        The raw files, one or many.
+    settings : TraceSettings
+        Which columns mean what.
+
+    Returns
+    -------
+    TraceFamily
+        In order of rising temperature.
+
+    Raises
+    ------
+    FileError
+        If a column is missing, of the wrong unit, or holds what cannot be (a temperature not above zero, a
+        field that does not change, a lock-in magnitude).
+    NotEnoughData
+        If nothing is left.
+    """
+    if not tables:
+        raise NotEnoughData("no raw files; name them in the study, such as files = ['sweeps/*.csv']")
+    notices: list[str] = []
+    sweeps: list[Sweep] = []
+    for table in tables:
+        record = _read(table, settings, notices)
+        sweeps += _cut(record, settings.sweep, notices)
+    if not sweeps:
+        raise NotEnoughData(
+            f"no sweep of at least {LEAST_ROWS} rows in {len(tables)} file(s); check the columns"
+        )
+    sweeps = _grouped(sweeps)
+    sweeps.sort(key=lambda sweep: (sweep.mean_temperature, sweep.group))
+    return TraceFamily(
+        tuple(sweeps), settings.sweep, settings.geometry, settings.gate_start, tuple(dict.fromkeys(notices))
+    )
+
+
+def _read(table: Table, settings: TraceSettings, notices: list[str]) -> _Record:
+    """Columns of a file in house units, checked."""
+    if len(table) == 0:
+        raise FileError("the file holds no rows of numbers", file=table.source)
+    notices += [f"{table.source}: {notice}" for notice in table.notices]
+    nothing = np.full(len(table), np.nan)
+    gate = nothing if settings.gate is None else take(table, settings.gate, "voltage", "V")
+    density = nothing if settings.density is None else take(table, settings.density, "density", "m^-2")
+    field = nothing if settings.field is None else _from(table, settings.field, "field", "T")
+    swept = {"field": (settings.field, field), "gate": (settings.gate, gate)}
+    rule, abscissa = swept.get(settings.sweep, (settings.density, density))
+    if not isinstance(rule, ColumnRule):
+        raise InputError(
+            f"a {settings.sweep} sweep needs {settings.sweep} = {{ column = ... }} in [traces]; found {rule!r}"
+        )
+    if settings.sweep != "field" and settings.field is None:
+        raise InputError(f"a {settings.sweep} sweep needs the field: field_T = ... or field = {{ column = ... }}")
+    for used in (settings.field, settings.gate, settings.density, settings.rho_xx, settings.rho_xy):
+        notice = unit_notice(table, used) if isinstance(used, ColumnRule) else None
+        notices += [notice] if notice else []
+    _refuse_constant(table, abscissa, rule, settings.sweep)
+    temperature = _temperature(table, settings)
+    current = _current(table, settings)
+    signal, quantity = _longitudinal(table, settings, current)
+    hall = quadrature = None
+    if settings.rho_xy is not None:
+        hall = _resistance(table, settings.rho_xy, settings, current)
+    if settings.quadrature is not None:
+        quadrature = _resistance(table, settings.quadrature, settings, current) * settings.geometry.factor
+    return _Record(
+        table, abscissa, field, gate, density, temperature, signal, quantity, hall, quadrature, current,
+        _contacts(table, settings), rule.column,
+    )  # fmt: skip
+
+
+def _from(
+    table: Table, rule: ColumnRule | FromName | FromTable | float, dimension: str, unit: str
+) -> FloatArray:
+    """Numbers of a column, or one number of the file's name, of another table, or of the study."""
+    if isinstance(rule, ColumnRule):
+        return take(table, rule, dimension, unit)
+    if isinstance(rule, FromName):
+        number = _number_in_name(table, rule, dimension)
+    elif isinstance(rule, FromTable):
+        number = _number_in_table(table, rule, dimension)
+    else:
+        number = float(rule)
+    return np.full(len(table), number)
+
+
+def _unit_factor(text: str, dimension: str, table: Table) -> float:
+    unit = parse_unit(text)
+    if unit is None or unit.dimension != dimension:
+        raise FileError(
+            f"unit {text!r} cannot be used for a {dimension}; allowed are {', '.join(units_of(dimension))}",
+            file=table.source,
+        )
+    return unit.factor
+
+
+def _number_in_name(table: Table, rule: FromName, dimension: str) -> float:
+    try:
+        match = re.search(rule.pattern, table.source.name)
+        text = None if match is None else match["value"]
+    except (re.error, IndexError) as problem:
+        raise InputError(
+            f"from_name = {rule.pattern!r} cannot be used ({problem}); write a regular expression with a group "
+            "(?P<value>...)"
+        ) from problem
+    if text is None:
+        raise FileError(
+            f"the file name does not match from_name = {rule.pattern!r}, so its {dimension} is unknown",
+            file=table.source,
+        )
+    try:
+        number = float(text.replace("p", ".").replace(",", ".").rstrip("."))
+    except ValueError as problem:
+        raise FileError(
+            f"{text!r} in the file name is no number; the group 'value' of from_name may hold digits and a "
+            "'p' or point",
+            file=table.source,
+        ) from problem
+    return number * _unit_factor(rule.unit, dimension, table)
+
+
+def file_temperatures(rule: FromTable) -> dict[str, float]:
+    """Temperatures by file name, of a table of files and temperatures.
+
+    Parameters
+    ----------
+    rule : FromTable
+        The table, and its column of temperatures if that is not plain from its name.
+
+    Returns
+    -------
+    dict of str to float, K
+
+    Raises
+    ------
+    FileError
+        If the columns are not found or a file is listed twice.
+    """
+    return _listed(rule, "temperature")
+
+
+def _listed(rule: FromTable, dimension: str) -> dict[str, float]:
+    table = rule.table
+    column = rule.column
+    if column is None:
+        column = next((name for name in table.values if kind_of_name(name) == dimension), None)
+    names = next((n for n in table.columns if n.lower() in ("file", "name", "filename", "sweep")), None)
+    if names is None:
+        names = next(iter(table.texts), None)
+    if column is None or names is None:
+        raise FileError(
+            f"needs a column 'file' and a column of the {dimension}; found {', '.join(table.columns)}",
+            file=table.source,
+        )
+    numbers = take(table, ColumnRule(column, rule.unit), dimension, {"temperature": "K"}.get(dimension, "T"))
+    texts = table.texts[names] if names in table.texts else [f"{v:g}" for v in table.values[names]]
+    listed: dict[str, float] = {}
+    for text, number, row in zip(texts, numbers, table.row, strict=True):
+        if str(text) in listed:
+            raise FileError(f"{str(text)!r} is listed twice", file=table.source, row=int(row), column=names)
+        listed[str(text)] = float(number)
+    return listed
+
+
+def _number_in_table(table: Table, rule: FromTable, dimension: str) -> float:
+    listed = _listed(rule, dimension)
+    name = table.source.name
+    stem = name.split(".", 1)[0]
+    for text, number in listed.items():
+        if PurePath(text).name in (name, table.source.stem, stem):
+            return number
+    raise FileError(
+        f"{name!r} is not listed there, so its {dimension} is unknown; listed are {', '.join(list(listed)[:6])}"
+        + (" ..." if len(listed) > 6 else ""),
+        file=rule.table.source,
+    )
+
+
+def _refuse_constant(table: Table, abscissa: FloatArray, rule: ColumnRule, kind: str) -> None:
+    if np.ptp(abscissa) <= 1e-9 * float(np.abs(abscissa).max()):
+        raise FileError(
+            f"found {abscissa[0]:g} in every row: the {kind} does not change, so this is no {kind} sweep; name the "
+            "column that is swept",
+            file=table.source,
+            row=int(table.row[0]),
+            column=rule.column,
+        )
+
+
+def _temperature(table: Table, settings: TraceSettings) -> FloatArray:
+    rule = settings.temperature
+    temperature = _from(table, rule, "temperature", "K")
+    column = rule.column if isinstance(rule, ColumnRule) else None
+    wrong = np.flatnonzero(~(temperature > 0))
+    if wrong.size:
+        raise FileError(
+            f"found a temperature of {temperature[wrong[0]]:g} K; temperatures must be above zero: correct or "
+            "remove the row",
+            file=table.source,
+            row=int(table.row[wrong[0]]) if column is not None else None,
+            column=column,
+        )
+    hot = np.flatnonzero(temperature > HIGHEST_TEMPERATURE_K)
+    if hot.size:
+        raise FileError(
+            f"found a temperature of {temperature[hot[0]]:g} K, which looks like millikelvins declared as "
+            'kelvins; state the unit, such as unit = "mK"',
+            file=table.source,
+            row=int(table.row[hot[0]]) if column is not None else None,
+            column=column,
+        )
+    return temperature
+
+
+def _current(table: Table, settings: TraceSettings) -> FloatArray:
+    rule = settings.current_A
+    if rule is None:
+        return np.full(len(table), np.nan)
+    current = take(table, rule, "current", "A") if isinstance(rule, ColumnRule) else np.full(len(table), rule)
+    zero = np.flatnonzero(current == 0)
+    if zero.size:
+        raise FileError(
+            "the excitation current is zero; a resistance needs a current",
+            file=table.source,
+            row=int(table.row[zero[0]]) if isinstance(rule, ColumnRule) else None,
+            column=rule.column if isinstance(rule, ColumnRule) else None,
+        )
+    return current
+
+
+def _longitudinal(
+    table: Table, settings: TraceSettings, current: FloatArray
+) -> tuple[FloatArray, Literal["rho_xx", "sigma_xx"]]:
+    """rho_xx, or sigma_xx of a Corbino disc."""
+    rule, shape = settings.rho_xx, settings.geometry
+    if shape.kind != "corbino":
+        return _resistance(table, rule, settings, current) * shape.factor, "rho_xx"
+    unit = resolved_unit(table, rule, ("voltage", "resistance", "conductance"), "ohm")
+    if unit.dimension == "conductance":
+        conductance = take(table, rule, "conductance", "S")
+        _refuse_magnitude(table, rule, settings)
+        return conductance * shape.factor / (1 - conductance * shape.lead_ohm), "sigma_xx"
+    sigma = corbino_conductivity(_resistance(table, rule, settings, current), shape)
+    bad = np.flatnonzero(~np.isfinite(sigma))
+    if bad.size:
+        raise FileError(
+            f"the resistance equals lead_ohm = {shape.lead_ohm:g} ohm, which leaves an infinite conductivity; "
+            "correct lead_ohm",
+            file=table.source,
+            row=int(table.row[bad[0]]),
+            column=rule.column,
+        )
+    return sigma, "sigma_xx"
+
+
+def _resistance(
+    table: Table, rule: ColumnRule, settings: TraceSettings, current: FloatArray
+) -> FloatArray:
+    """Resistance of a column in V or ohm."""
+    _refuse_magnitude(table, rule, settings)
+    default = "ohm" if settings.current_A is None else "V"
+    unit = resolved_unit(table, rule, ("voltage", "resistance"), default)
+    numbers = take(table, rule, ("voltage", "resistance"), default)
+    if unit.dimension == "resistance":
+        return numbers
+    if settings.current_A is None:
+        raise FileError(
+            f"this column is a voltage ({unit.name}); give the excitation current, such as current_A = 1e-8, or "
+            'unit = "ohm"',
+            file=table.source,
+            column=rule.column,
+        )
+    return numbers / current
+
+
+def _refuse_magnitude(table: Table, rule: ColumnRule, settings: TraceSettings) -> None:
+    name = table.find(rule.column)
+    if settings.allow_magnitude or name not in table.values:
+        return
+    if looks_like_magnitude(name, table.values[name], table.columns, rule.unit or table.unit(name)):
+        raise FileError(
+            "this looks like the magnitude of a lock-in, which is never negative: noise about zero becomes a "
+            "false resistance of 1.25 standard deviations at the minima, and gaps come out too small. Name the "
+            "in-phase channel (X), or set allow_magnitude = true in [traces] if it is none",
+            file=table.source,
+            column=name,
+        )
+
+
+def _contacts(table: Table, settings: TraceSettings) -> NDArray[np.str_]:
+    rule = settings.contacts
+    if not isinstance(rule, ColumnRule):
+        return np.full(len(table), rule)
+    name = table.find(rule.column)
+    if name in table.texts:
+        return table.texts[name]
+    return np.array([f"{value:g}" for value in table.values[name]])
+
+
+def _cut(record: _Record, kind: Literal["field", "density", "gate"], notices: list[str]) -> list[Sweep]:
+    """Monotone passes of one field direction of a record."""
+    cuts = (np.flatnonzero(np.diff(record.table.block)) + 1).tolist()
+    cuts += (np.flatnonzero(record.contacts[1:] != record.contacts[:-1]) + 1).tolist()
+    cuts += plateau_edges(record.temperature, TEMPERATURE_STEP)
+    if kind != "field":
+        cuts += plateau_edges(record.field_T, FIXED_STEP)
+    if np.isfinite(record.current).all():
+        cuts += plateau_edges(record.current, CURRENT_STEP)
+    sweeps, dropped = [], 0
+    for start, stop in passes(record.abscissa, cuts):
+        for part in _by_field_sign(record, kind, np.arange(start, stop)):
+            sweep = _sweep(record, kind, part, record.abscissa[stop - 1] >= record.abscissa[start], notices)
+            sweeps += [sweep] if sweep is not None else []
+            dropped += part.size if sweep is None else 0
+    if dropped:
+        notices.append(f"{record.table.source}: {dropped} rows between sweeps are not used")
+    return sweeps
+
+
+def _by_field_sign(record: _Record, kind: str, rows: NDArray[np.int64]) -> list[NDArray[np.int64]]:
+    """Rows of positive and of negative field, zero left out."""
+    field = record.field_T[rows]
+    if kind != "field":
+        return [rows]
+    return [rows[mask] for mask in (field > 0, field < 0) if mask.any()]
+
+
+def _sweep(
+    record: _Record, kind: Literal["field", "density", "gate"], rows: NDArray[np.int64], up: bool,
+    notices: list[str],
+) -> Sweep | None:  # fmt: skip
+    """One sweep in order of rising abscissa, or None where there is too little of it."""
+    if rows.size < LEAST_ROWS or np.ptp(record.abscissa[rows]) < 0.01 * np.ptp(record.abscissa):
+        return None
+    optional = [column for column in (record.hall, record.quadrature) if column is not None]
+    names = (record.field_T, record.gate_V, record.density, record.temperature, record.signal)
+    columns = np.stack([column[rows] for column in (*names, *optional)])
+    abscissa, columns, first = merged(record.abscissa[rows], columns)
+    if abscissa.size < LEAST_ROWS:
+        return None
+    if abscissa.size < rows.size:
+        notices.append(
+            f"{record.table.source}: {rows.size - abscissa.size} points repeat another one's {kind} and were "
+            "averaged with it"
+        )
+    field, gate, density, temperature, signal = columns[:5]
+    rest = list(columns[5:])
+    hall = rest.pop(0) if record.hall is not None else None
+    current = record.current[rows]
+    return Sweep(
+        file=str(record.table.source),
+        row=record.table.row[rows][first],
+        kind=kind,
+        field_T=field,
+        gate_V=gate,
+        density_per_m2=density,
+        temperature_K=temperature,
+        signal=signal,
+        quantity=record.quantity,
+        rho_xy_ohm=hall,
+        quadrature=rest.pop(0) if rest else None,
+        direction="up" if up else "down",
+        field_sign=1 if np.median(field) > 0 else -1,
+        group=-1,
+        current_A=float(np.median(current)),
+        contacts=str(record.contacts[rows[0]]),
+        step=digit(record.signal[rows]),
+        segment=gap_segments(abscissa),
+        one_sided=np.zeros(abscissa.size, dtype=bool),
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class _Unit:
+    """Sweeps that were taken together."""
+
+    key: tuple[str, str, float]
+    temperature: float
+    file: str
+    members: tuple[int, ...]
+    roles: frozenset[tuple[int, str]]
+
+
+def _key(sweep: Sweep) -> tuple[str, str, float]:
+    """What sweeps that are joined must share: contacts, current, fixed field."""
+    current = f"{abs(sweep.current_A):.2g}"
+    field = 0.0 if sweep.kind == "field" else round(sweep.mean_field, 3)
+    return sweep.contacts, current, field
+
+
+def _grouped(sweeps: list[Sweep]) -> list[Sweep]:
+    """Sweeps with their group numbers: one temperature, every field direction and sweep direction once."""
+    units: list[_Unit] = []
+    for index, sweep in enumerate(sweeps):
+        role = (sweep.field_sign, sweep.direction)
+        unit = _Unit(_key(sweep), sweep.mean_temperature, sweep.file, (index,), frozenset({role}))
+        last = units[-1] if units else None
+        if last is not None and last.file == unit.file and _may_join(last, unit, SAME_TEMPERATURE):
+            units[-1] = _joined(last, unit)
+        else:
+            units.append(unit)
+    units = _join_files(units)
+    number = {member: group for group, unit in enumerate(units) for member in unit.members}
+    return [replace(sweep, group=number[index]) for index, sweep in enumerate(sweeps)]
+
+
+def _may_join(one: _Unit, two: _Unit, tolerance: float) -> bool:
+    close = abs(one.temperature - two.temperature) <= tolerance * one.temperature
+    return one.key == two.key and close and one.roles.isdisjoint(two.roles)
+
+
+def _joined(one: _Unit, two: _Unit) -> _Unit:
+    members = one.members + two.members
+    return replace(one, members=members, roles=one.roles | two.roles)
+
+
+def _join_files(units: list[_Unit]) -> list[_Unit]:
+    """Join units of different files that complete each other, the nearest temperatures first."""
+    pairs = [
+        (abs(one.temperature - two.temperature), i, i + 1 + j)
+        for i, one in enumerate(units)
+        for j, two in enumerate(units[i + 1 :])
+        if one.file != two.file and _may_join(one, two, SAME_TEMPERATURE_ACROSS_FILES)
+    ]
+    current: dict[int, _Unit] = dict(enumerate(units))
+    owner = list(range(len(units)))
+    for _, i, j in sorted(pairs):
+        left, right = owner[i], owner[j]
+        if left != right and _may_join(current[left], current[right], SAME_TEMPERATURE_ACROSS_FILES):
+            current[left] = _joined(current[left], current.pop(right))
+            owner = [left if number == right else number for number in owner]
+    return list(current.values())

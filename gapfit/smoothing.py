@@ -1,0 +1,293 @@
+"""Local polynomials with honest standard errors: noise of lock-ins is correlated from sample to sample.
+
+The noise is taken as white noise plus noise behind one low-pass filter: its correlation k samples apart is
+share * persistence^k for k > 0. Residuals of a polynomial fit are less correlated than the noise itself; the
+estimates here allow for that exactly.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.signal import lfilter, savgol_filter
+
+__all__ = [
+    "Curve",
+    "Noise",
+    "fit_noise",
+    "interpolated",
+    "noise_amplitude",
+    "polynomial_operator",
+    "residual_covariance",
+    "smooth_curve",
+    "variance_factor",
+]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+PERSISTENCE = tuple(float(np.exp(-1 / time)) for time in np.geomspace(0.7, 60, 24))
+"""Grid on which the persistence is fitted."""
+SLOWEST = 0.6
+"""Correlation times beyond this share of the samples per fitted coefficient cannot be told from signal."""
+LAGS = 12
+
+
+@dataclass(frozen=True)
+class Noise:
+    """Correlation of the noise between samples: share * persistence^k for samples k > 0 apart.
+
+    Attributes
+    ----------
+    share : float
+        Part of the variance that is correlated.
+    persistence : float
+        Correlation of that part between neighbours.
+    """
+
+    share: float = 0.0
+    persistence: float = 0.0
+
+    @property
+    def independent_every(self) -> float:
+        """Samples per independent one, 1 + 2 sum of the correlations."""
+        return 1 + 2 * self.share * self.persistence / (1 - self.persistence)
+
+
+def variance_factor(weights: FloatArray, noise: Noise) -> FloatArray:
+    """Variance of weighted sums of unit noise.
+
+    Parameters
+    ----------
+    weights : ndarray[..., n_point]
+        Weights of the samples, in their order.
+    noise : Noise
+        Correlation.
+
+    Returns
+    -------
+    ndarray[...]
+    """
+    white = np.sum(weights**2, axis=-1)
+    if noise.share == 0:
+        return np.asarray(white)
+    run = lfilter([1.0], [1.0, -noise.persistence], weights, axis=-1)
+    chained = 2 * np.sum(weights * run, axis=-1) - white
+    return np.asarray((1 - noise.share) * white + noise.share * chained)
+
+
+def polynomial_operator(position: FloatArray, degree: int) -> FloatArray:
+    """Weights that give the coefficients of a least-squares polynomial about zero.
+
+    Parameters
+    ----------
+    position : ndarray[n_point]
+        Distance from the point of interest, best of order one.
+    degree : int
+        Degree of the polynomial.
+
+    Returns
+    -------
+    ndarray[degree + 1, n_point]
+        Times the readings: value, slope, half the curvature, ...
+    """
+    basis = np.vander(position, degree + 1, increasing=True)
+    return np.linalg.pinv(basis)
+
+
+def residual_covariance(residual: FloatArray) -> FloatArray:
+    """Mean products of residuals up to `LAGS` samples apart, each over n_point.
+
+    Parameters
+    ----------
+    residual : ndarray[n_point]
+
+    Returns
+    -------
+    ndarray[LAGS]
+    """
+    size = residual.size
+    found = np.zeros(LAGS)
+    for lag in range(min(LAGS, size)):
+        found[lag] = residual[: size - lag] @ residual[lag:] / size
+    return found
+
+
+@lru_cache(maxsize=512)
+def _projection(size: int, degree: int) -> FloatArray:
+    position = np.linspace(-1, 1, size)
+    basis, _ = np.linalg.qr(np.vander(position, degree + 1, increasing=True))
+    return np.eye(size) - basis @ basis.T
+
+
+@lru_cache(maxsize=4096)
+def _expected(size: int, degree: int, persistence: float) -> FloatArray:
+    """Expectation of `residual_covariance` for unit noise after a polynomial fit on even spacing."""
+    residual = _projection(size, degree)
+    if persistence > 0:
+        distance = np.abs(np.subtract.outer(np.arange(size), np.arange(size)))
+        residual = residual @ persistence**distance @ residual
+    return np.array([np.trace(residual, offset=lag) / size if lag < size else 0.0 for lag in range(LAGS)])
+
+
+def fit_noise(covariance: FloatArray, size: int, degree: int) -> Noise:
+    """Correlation of the noise from the residuals of polynomial fits.
+
+    Parameters
+    ----------
+    covariance : ndarray[LAGS]
+        `residual_covariance`, averaged over windows.
+    size : int
+        Points of a window.
+    degree : int
+        Degree of the polynomial that was fitted in each window.
+
+    Returns
+    -------
+    Noise
+    """
+    lags = min(LAGS, size)
+    target = covariance[:lags]
+    if not target[0] > 0:
+        return Noise()
+    white = _expected(size, degree, 0.0)[:lags]
+    best, found = np.inf, Noise()
+    slowest = np.exp(-(degree + 1) / (SLOWEST * size))
+    for persistence in (value for value in PERSISTENCE if value <= slowest):
+        chained = _expected(size, degree, persistence)[:lags]
+        parts = _two_parts(white, chained, target)
+        misfit = float(np.sum((target - parts[0] * white - parts[1] * chained) ** 2))
+        if misfit < best:
+            best, total = misfit, parts[0] + parts[1]
+            found = Noise(parts[1] / total, persistence) if parts[1] > 0 else Noise()
+    return found
+
+
+def _two_parts(one: FloatArray, two: FloatArray, target: FloatArray) -> tuple[float, float]:
+    """Least squares of a target by two parts with coefficients not below zero."""
+    a, b, c = float(one @ one), float(one @ two), float(two @ two)
+    d, e = float(one @ target), float(two @ target)
+    determinant = a * c - b * b
+    if determinant > 1e-12 * a * c:
+        first, second = (c * d - b * e) / determinant, (a * e - b * d) / determinant
+        if first >= 0 and second >= 0:
+            return first, second
+    alone = [(max(d / a, 0.0), 0.0), (0.0, max(e / c, 0.0))]
+    return min(alone, key=lambda p: float(np.sum((target - p[0] * one - p[1] * two) ** 2)))
+
+
+def noise_amplitude(residual_square: float, size: int, degree: int, noise: Noise) -> float:
+    """Standard deviation of the noise from the mean square residual of a polynomial fit.
+
+    Parameters
+    ----------
+    residual_square : float
+        Sum of squared residuals over n_point.
+    size, degree : int
+        Points of the window, degree of the polynomial.
+    noise : Noise
+        Correlation.
+
+    Returns
+    -------
+    float
+        In the unit of the residuals.
+    """
+    expected = (1 - noise.share) * _expected(size, degree, 0.0)[0]
+    if noise.share > 0:
+        expected += noise.share * _expected(size, degree, noise.persistence)[0]
+    return float(np.sqrt(residual_square / expected))
+
+
+def interpolated(at: FloatArray, position: FloatArray, values: FloatArray, segment: IntArray) -> FloatArray:
+    """Straight lines between points, NaN outside and in gaps.
+
+    Parameters
+    ----------
+    at : ndarray[n_at]
+        Where values are wanted.
+    position : ndarray[n_point]
+        Rising.
+    values : ndarray[n_point]
+    segment : ndarray[n_point] of int
+        Numbers the pieces between gaps.
+
+    Returns
+    -------
+    ndarray[n_at]
+    """
+    right = np.clip(np.searchsorted(position, at), 1, position.size - 1)
+    found = np.interp(at, position, values, left=np.nan, right=np.nan)
+    hit = (at == position[right]) | (at == position[right - 1])
+    return np.where(hit | (segment[right] == segment[right - 1]), found, np.nan)
+
+
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """A smoothed trace on an even axis.
+
+    Attributes
+    ----------
+    axis : ndarray[n_axis]
+        Evenly spaced, rising.
+    value, slope, curvature : ndarray[n_axis]
+        The trace and its derivatives by the axis, NaN in gaps and next to them.
+    noise : float
+        Standard error of the smoothed value, from the residuals.
+    """
+
+    axis: FloatArray
+    value: FloatArray
+    slope: FloatArray
+    curvature: FloatArray
+    noise: float
+
+
+def smooth_curve(
+    position: FloatArray, values: FloatArray, segment: IntArray, step: float, half_width: float
+) -> Curve:
+    """Trace averaged into bins of an even axis and smoothed by local cubics.
+
+    Parameters
+    ----------
+    position : ndarray[n_point]
+        Rising.
+    values : ndarray[n_point]
+    segment : ndarray[n_point] of int
+        Numbers the pieces between gaps.
+    step : float
+        Spacing of the axis.
+    half_width : float
+        Half of the smoothing window.
+
+    Returns
+    -------
+    Curve
+    """
+    axis = np.arange(np.ceil(position[0] / step), np.floor(position[-1] / step) + 1) * step
+    index = np.rint((position - axis[0]) / step).astype(int)
+    inside = (index >= 0) & (index < axis.size)
+    count = np.bincount(index[inside], minlength=axis.size)
+    total = np.bincount(index[inside], weights=values[inside], minlength=axis.size)
+    bridged = interpolated(axis, position, values, segment)
+    binned = np.where(np.isnan(bridged), np.nan, np.where(count > 0, total / np.maximum(count, 1), bridged))
+    window = 2 * max(3, round(half_width / step)) + 1
+    shape = (axis.size,)
+    parts = [np.full(shape, np.nan) for _ in range(3)]
+    for start, stop in _stretches(~np.isnan(binned)):
+        if stop - start >= window:
+            for order, part in enumerate(parts):
+                part[start:stop] = savgol_filter(binned[start:stop], window, 3, deriv=order, delta=step)
+    residual = (values - interpolated(position, axis, parts[0], np.zeros(axis.size, dtype=np.int64)))
+    residual = residual[np.isfinite(residual)]
+    spread = 1.4826 * float(np.median(np.abs(residual))) if residual.size else 0.0
+    per_window = max(1.0, position.size * window / axis.size)
+    return Curve(axis, parts[0], parts[1], parts[2], spread * float(np.sqrt(2.25 / per_window)))
+
+
+def _stretches(mask: NDArray[np.bool_]) -> list[tuple[int, int]]:
+    """Start and stop of each stretch of True."""
+    change = np.diff(np.concatenate(([False], mask, [False])).astype(np.int8))
+    return list(zip(np.flatnonzero(change == 1).tolist(), np.flatnonzero(change == -1).tolist(), strict=True))
