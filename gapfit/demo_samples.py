@@ -141,8 +141,8 @@ _HAREBELL_TABLE = {
     "4/7": (1.1, 4.0, 12.0),
     "3/5": (0.65, 6.0, 25.0),
     "2/3": (0.4, 11.0, 50.0),
-    "5/7": (0.8, 2.0, 8.0),
-    "4/5": (0.6, 3.0, 10.0),
+    "5/7": (1.5, 2.0, 8.0),
+    "4/5": (1.0, 3.0, 10.0),
     "1": (0.7, 30.0, 50.0),
     "4/3": (0.5, 4.0, 10.0),
     "5/3": (0.5, 3.0, 8.0),
@@ -179,8 +179,8 @@ def _reaches(fillings: list[Fraction]) -> dict[Fraction, tuple[float, float]]:
 
 def _flank(filling: Fraction, field_T: float, shape: Background) -> float:
     """Background at an exact filling in the limit of zero temperature, ohm."""
-    point = (np.array([value]) for value in (float(filling), field_T, 1e-3))
-    return float(background(*point, shape)[0])
+    cold = np.array([1e-3])
+    return float(background(np.array([float(filling)]), np.array([field_T]), cold, shape)[0])
 
 
 def _harebell_gap(filling: Fraction, sample: HallBar) -> float:
@@ -219,7 +219,9 @@ def harebell_states(sample: HallBar) -> tuple[StateTruth, ...]:
                 hopping="efros-shklovskii",
                 hopping_amplitude_ohm_K=amplitude * sample.hopping_scale,
                 hopping_T0_K=hopping_K,
-                background_ohm=_flank(filling, field_at_filling(filling, sample.density_per_m2), sample.flanks),
+                background_ohm=_flank(
+                    filling, field_at_filling(filling, sample.density_per_m2), sample.flanks
+                ),
                 background_slope_per_K=sample.flanks.slope_per_K,
                 electron_T0_K=0.028 + 0.004 * (index % 4),
                 reach_low=reaches[filling][0],

@@ -71,7 +71,8 @@ def electron_temperature(temperature: FloatArray, saturation_K: float, exponent:
     -------
     ndarray, K
     """
-    return (temperature**exponent + saturation_K**exponent) ** (1 / exponent)
+    hot: FloatArray = (temperature**exponent + saturation_K**exponent) ** (1 / exponent)
+    return hot
 
 
 def activated(temperature: FloatArray, gap_K: FloatArray | float, prefactor_ohm: float) -> FloatArray:
@@ -191,10 +192,14 @@ class StateTruth:
             raise InputError(f"roll-over {self.rollover!r} is unknown; allowed are {', '.join(ROLLOVERS)}")
         for name in ("gap_K", "prefactor_ohm", "hopping_amplitude_ohm_K", "leak_ohm", "electron_T0_K"):
             if getattr(self, name) < 0:
-                raise InputError(f"{name} = {getattr(self, name)} of filling {self.filling} is negative; give >= 0")
+                raise InputError(
+                    f"{name} = {getattr(self, name)} of filling {self.filling} is negative; give >= 0"
+                )
         for name in ("hopping_T0_K", "background_ohm", "reach_low", "reach_high"):
             if not getattr(self, name) > 0:
-                raise InputError(f"{name} = {getattr(self, name)} of filling {self.filling} must be above zero")
+                raise InputError(
+                    f"{name} = {getattr(self, name)} of filling {self.filling} must be above zero"
+                )
 
     @property
     def regime(self) -> str:
@@ -202,7 +207,7 @@ class StateTruth:
         parts = ["activated"] if self.prefactor_ohm > 0 and self.gap_K > 0 else []
         parts += [self.hopping] if self.hopping_amplitude_ohm_K > 0 else []
         parts += ["roll-over"] if np.isfinite(self.background_ohm) and self.rollover != "none" else []
-        parts += ["leak"] if self.leak_ohm > 0 else []
+        parts += ["leak"] if parts and self.leak_ohm > 0 else []
         return " + ".join(parts) or "flat"
 
 
@@ -218,7 +223,8 @@ def _unlimited(temperature: FloatArray, truth: StateTruth, position: FloatArray 
     thermal = activated(hot, truth.gap_K * core, truth.prefactor_ohm)
     power = HOPPING_POWERS[truth.hopping]
     tail = hopping(hot, truth.hopping_amplitude_ohm_K, truth.hopping_T0_K * core, power)
-    return (thermal + tail) / edge
+    unlimited: FloatArray = (thermal + tail) / edge**2
+    return unlimited
 
 
 def temperature_curve(temperature: FloatArray, truth: StateTruth) -> FloatArray:
@@ -282,7 +288,9 @@ class Background:
 def shubnikov_de_haas(
     field_T: FloatArray, temperature: FloatArray | float, mass: float, dingle_K: float
 ) -> FloatArray:
-    """Relative amplitude 4 (X / sinh X) exp(-pi / w_c tau_q) of the oscillations, X = 2 pi^2 k_B T / hbar w_c.
+    """Relative amplitude 4 (X / sinh X) exp(-pi / w_c tau_q) of the oscillations.
+
+    X = 2 pi^2 k_B T / hbar w_c is the temperature over the cyclotron energy.
 
     Parameters
     ----------
@@ -348,7 +356,9 @@ def _oscillation(
     1 - A cos(pi nu) for small amplitudes A; positive, with sharp peaks, for large ones.
     """
     level = np.minimum(np.abs(filling), 1e4)
-    amplitude = shubnikov_de_haas(field_T, temperature, shape.mass, shape.dingle_K) / (1 + (3.5 / level) ** 12)
+    amplitude = shubnikov_de_haas(field_T, temperature, shape.mass, shape.dingle_K) / (
+        1 + (3.5 / level) ** 12
+    )
     return np.exp(-amplitude * np.cos(pi * level)) / i0(amplitude)
 
 

@@ -31,6 +31,14 @@ from gapfit.demo_samples import (
     harebell_states,
     teasel_states,
 )
+from gapfit.demo_studies import (
+    CAMPION_LOOK_FOR,
+    CAMPION_STUDY,
+    HAREBELL_LOOK_FOR,
+    MARK,
+    TEASEL_STUDY,
+    harebell_study,
+)
 from gapfit.errors import InputError
 from gapfit.hall import density_from_filling, field_at_filling, filling_factor
 from gapfit.instrument import Instrument, correlated_noise, field_seen, quantise, temperatures, voltages
@@ -50,8 +58,6 @@ DEMOS: dict[str, str] = {
 
 SEEDS = {"harebell-3": 30_311, "campion-1": 10_143, "teasel-2": 20_257, "harebell-4": 40_409}
 """Seed of every demo data set as shipped."""
-
-_MARK = "SYNTHETIC DATA, made by gapfit simulate; sample and readings are invented"
 
 
 def simulate_series(
@@ -133,9 +139,9 @@ def _columns(columns: list[FloatArray], formats: list[str], delimiter: str) -> s
     return "\n".join(pattern.format(*row) for row in rows) + "\n"
 
 
-def _zipped(text: str, encoding: str = "utf-8") -> bytes:
+def _zipped(text: bytes) -> bytes:
     """Compressed text without a time stamp, so that equal text gives equal bytes."""
-    return gzip.compress(text.encode(encoding), compresslevel=9, mtime=0)
+    return gzip.compress(text, compresslevel=9, mtime=0)
 
 
 def _json(content: dict[str, Any]) -> bytes:
@@ -150,58 +156,11 @@ def _state_record(truth: StateTruth, field_T: float, looked_for: set[Fraction]) 
 
 
 def _truth_head(name: str, seed: int, line: Instrument | None = None) -> dict[str, Any]:
-    head: dict[str, Any] = {"synthetic": True, "note": _MARK, "name": name, "seed": seed}
+    head: dict[str, Any] = {"synthetic": True, "note": MARK, "name": name, "seed": seed}
     return head if line is None else head | {"instrument": asdict(line)}
 
 
 # --- harebells: field sweeps ----------------------------------------------------------------------------
-
-_HAREBELL_LOOK_FOR = ("1/3", "2/5", "3/7", "4/9", "5/9", "4/7", "3/5", "2/3", "1")
-
-_HAREBELL_STUDY = """\
-# {mark}
-[sample]
-name = "{name}"
-cooldown = "first"
-host = "GaAs"
-permittivity = 12.9
-density_cm2 = {density_cm2}
-mobility_cm2_per_Vs = {mobility}
-
-[geometry]
-kind = "hall-bar"
-length_um = 400
-width_um = 100
-relative_error = 0.05
-
-[traces]
-files = ["sweeps/*.{suffix}"]
-sweep = "field"
-temperature = {{ column = "{temperature}", unit = "{unit}" }}
-field = {{ column = "{field}", unit = "T" }}
-rho_xx = {{ column = "{along}_X", unit = "V" }}
-rho_xy = {{ column = "{across}_X", unit = "V" }}
-quadrature = {{ column = "{along}_Y", unit = "V" }}
-current_A = 1e-8
-symmetrise = "auto"
-
-[fillings]
-look_for = [{fillings}]
-max_denominator = 11
-
-[thermometry]
-relative_error = 0.005
-scale_error = 0.01
-electron_saturation = true
-saturation_exponent = 4
-
-[fit]
-quantity = "auto"
-mechanisms = "default"
-window = "average"
-noise = "student"
-seed = 20260101
-"""
 
 
 def _field_axis(limit_T: float, coarse: int) -> FloatArray:
@@ -239,7 +198,7 @@ def _field_sweep(
 
 
 def _harebell_truth(name: str, seed: int, sample: HallBar) -> bytes:
-    looked_for = {Fraction(text) for text in _HAREBELL_LOOK_FOR}
+    looked_for = {Fraction(text) for text in HAREBELL_LOOK_FOR}
     states = [
         _state_record(truth, field_at_filling(truth.filling, sample.density_per_m2), looked_for)
         for truth in harebell_states(sample)
@@ -254,30 +213,26 @@ def _harebell_truth(name: str, seed: int, sample: HallBar) -> bytes:
     return _json(_truth_head(name, seed, sample.line) | facts | {"states": states})
 
 
-def _harebell_study(**keys: str) -> bytes:
-    fillings = ", ".join(f'"{text}"' for text in _HAREBELL_LOOK_FOR)
-    return _HAREBELL_STUDY.format(mark=_MARK, fillings=fillings, **keys).encode()
-
-
 def _harebell_3(seed: int) -> dict[str, bytes]:
     """One tab-separated file per temperature, sweeps alternating in direction, with a unit row."""
     axis = _field_axis(HAREBELL_3.field_limit_T, 1)
     files = {}
     streams = np.random.SeedSequence(seed).spawn(len(HAREBELL_3.temperatures_K))
     for index, (nominal_K, stream) in enumerate(zip(HAREBELL_3.temperatures_K, streams, strict=True)):
-        upward = index % 2 == 0
-        columns = _field_sweep(axis if upward else axis[::-1], nominal_K, HAREBELL_3, np.random.default_rng(stream))
+        ordered, direction = (axis, "up") if index % 2 == 0 else (axis[::-1], "down")
+        columns = _field_sweep(ordered, nominal_K, HAREBELL_3, np.random.default_rng(stream))
         columns[1] = 1e3 * columns[1]
-        head = f"# {_MARK}\n# sample harebell-3, first cool-down, field sweep {'up' if upward else 'down'}\n"
+        head = f"# {MARK}\n# sample harebell-3, first cool-down, field sweep {direction}\n"
         head += "# excitation 10 nA, 7.3 Hz; X in phase, Y quadrature\n"
         head += "B\tT_mK\tVxx_X\tVxx_Y\tVxy_X\tVxy_Y\nT\tmK\tV\tV\tV\tV\n"
         body = _columns(columns, ["{:.4f}", "{:.2f}", *["{:.6g}"] * 4], "\t")
-        files[f"sweeps/hb3_{index + 1:02d}_{'up' if upward else 'down'}.dat.gz"] = _zipped(head + body)
-    study = _harebell_study(
+        files[f"sweeps/hb3_{index + 1:02d}_{direction}.dat.gz"] = _zipped((head + body).encode())
+    study = harebell_study(
         name="harebell-3", density_cm2="1.12e11", mobility="5e6", suffix="dat.gz", temperature="T_mK",
         unit="mK", field="B", along="Vxx", across="Vxy",
     )  # fmt: skip
-    return {**files, "study.toml": study, "truth.json": _harebell_truth("harebell-3", seed, HAREBELL_3)}
+    truth = _harebell_truth("harebell-3", seed, HAREBELL_3)
+    return {**files, "study.toml": study.encode(), "truth.json": truth}
 
 
 def _harebell_4(seed: int) -> dict[str, bytes]:
@@ -289,64 +244,21 @@ def _harebell_4(seed: int) -> dict[str, bytes]:
         rng = np.random.default_rng(stream)
         sweeps = [_field_sweep(part, nominal_K, HAREBELL_4, rng) for part in (axis, axis[::-1])]
         columns = [np.concatenate(pair) for pair in zip(*sweeps, strict=True)]
-        head = f"% {_MARK}\n% sample: harebell-4\n% excitation: 10 nA\n"
+        head = f"% {MARK}\n% sample: harebell-4\n% excitation: 10 nA\n"
         head += "Magnet (T),Bath (K),Uxx_X (V),Uxx_Y (V),Uxy_X (V),Uxy_Y (V)\n"
         body = _columns(columns, ["{:.4f}", "{:.5f}", *["{:.6g}"] * 4], ",")
-        files[f"sweeps/run{index + 1:02d}.csv.gz"] = _zipped(head + body, "utf-16")
-    study = _harebell_study(
-        name="harebell-4", density_cm2="1.08e11", mobility="1.5e6", suffix="csv.gz", temperature="Bath (K)",
-        unit="K", field="Magnet (T)", along="Uxx", across="Uxy",
+        files[f"sweeps/run{index + 1:02d}.csv.gz"] = _zipped(f"\ufeff{head}{body}".encode("utf-16-le"))
+    study = harebell_study(
+        name="harebell-4", density_cm2="1.08e11", mobility="1.5e6", suffix="csv.gz", temperature="Bath",
+        unit="K", field="Magnet", along="Uxx", across="Uxy",
     )  # fmt: skip
-    study = study.replace(b'_X"', b'_X (V)"').replace(b'_Y"', b'_Y (V)"')
-    return {**files, "study.toml": study, "truth.json": _harebell_truth("harebell-4", seed, HAREBELL_4)}
+    truth = _harebell_truth("harebell-4", seed, HAREBELL_4)
+    return {**files, "study.toml": study.encode(), "truth.json": truth}
 
 
 # --- campion: gate sweeps -------------------------------------------------------------------------------
 
 _CAMPION_CAPACITANCE, _CAMPION_NEUTRALITY_V = 1.121e-3 * 1.005, 0.0527
-_CAMPION_LOOK_FOR = ("-1/3", "1/3", "2/5", "2/3", "1", "4/3", "2")
-
-_CAMPION_STUDY = f"""\
-# {_MARK}
-[sample]
-name = "campion-1"
-cooldown = "first"
-host = "graphene-hBN"
-permittivity = 3.8
-
-[geometry]
-kind = "hall-bar"
-length_um = 4
-width_um = 2
-relative_error = 0.1
-
-[traces]
-files = ["sweeps/*.txt"]
-sweep = "gate"
-temperature = {{ from_name = "T(?P<value>[0-9p.]+)K" }}
-gate = {{ column = "U_gate", unit = "V" }}
-field = {{ column = "Field", unit = "T" }}
-rho_xx = {{ column = "U_xx", unit = "V" }}
-rho_xy = {{ column = "U_xy", unit = "V" }}
-current_A = 2e-8
-capacitance_F_per_m2 = 1.121e-3
-neutrality_V = 0.05
-
-[fillings]
-look_for = [{", ".join(f'"{text}"' for text in _CAMPION_LOOK_FOR)}]
-max_denominator = 5
-
-[thermometry]
-relative_error = 0.008
-scale_error = 0.01
-
-[fit]
-quantity = "auto"
-mechanisms = "default"
-window = "average"
-noise = "student"
-seed = 20260101
-"""
 
 
 def _gate_sweep(field_T: float, nominal_K: float, rng: np.random.Generator) -> list[FloatArray]:
@@ -369,52 +281,32 @@ def _gate_sweep(field_T: float, nominal_K: float, rng: np.random.Generator) -> l
 def _campion_1(seed: int) -> dict[str, bytes]:
     """A semicolon-separated file with decimal commas per field and temperature, which the name tells."""
     files = {}
-    looked_for = {Fraction(text) for text in _CAMPION_LOOK_FOR}
+    looked_for = {Fraction(text) for text in CAMPION_LOOK_FOR}
     pairs = [(field_T, nominal_K) for field_T in CAMPION_FIELDS_T for nominal_K in CAMPION_TEMPERATURES_K]
     streams = np.random.SeedSequence(seed).spawn(len(pairs))
     for (field_T, nominal_K), stream in zip(pairs, streams, strict=True):
         columns = _gate_sweep(field_T, nominal_K, np.random.default_rng(stream))
-        head = f"# {_MARK}\n# campion-1; magnet persistent; excitation 20 nA\n"
+        head = f"# {MARK}\n# campion-1; magnet persistent; excitation 20 nA\n"
         head += "U_gate;Field;U_xx;U_xy\nV;T;V;V\n"
         body = _columns(columns, ["{:.4f}", "{:.4f}", "{:.6g}", "{:.6g}"], ";").replace(".", ",")
         label = f"{nominal_K:g}".replace(".", "p")
         files[f"sweeps/campion_B{field_T:.1f}T_T{label}K.txt"] = (head + body).encode()
     states = [
-        _state_record(truth, field_T, looked_for) for field_T in CAMPION_FIELDS_T for truth in campion_states(field_T)
+        _state_record(truth, field_T, looked_for)
+        for field_T in CAMPION_FIELDS_T
+        for truth in campion_states(field_T)
     ]
-    facts = {"capacitance_F_per_m2": _CAMPION_CAPACITANCE, "neutrality_V": _CAMPION_NEUTRALITY_V}
-    facts |= {"temperatures_K": CAMPION_TEMPERATURES_K, "flanks": asdict(CAMPION_BACKGROUND)}
+    facts = {
+        "capacitance_F_per_m2": _CAMPION_CAPACITANCE,
+        "neutrality_V": _CAMPION_NEUTRALITY_V,
+        "temperatures_K": CAMPION_TEMPERATURES_K,
+        "flanks": asdict(CAMPION_BACKGROUND),
+    }
     truth = _json(_truth_head("campion-1", seed, CAMPION_LINE) | facts | {"states": states})
-    return {**files, "study.toml": _CAMPION_STUDY.encode(), "truth.json": truth}
+    return {**files, "study.toml": CAMPION_STUDY.encode(), "truth.json": truth}
 
 
 # --- teasel: minima already read off --------------------------------------------------------------------
-
-_TEASEL_STUDY = f"""\
-# {_MARK}
-[sample]
-name = "teasel-2"
-cooldown = "second"
-host = "GaAs"
-permittivity = 12.9
-density_cm2 = 1.04e11
-
-[geometry]
-kind = "resistivity"
-
-[series]
-file = "minima.csv"
-
-[thermometry]
-scale_error = 0.01
-
-[fit]
-quantity = "rho_xx"
-mechanisms = "default"
-window = "average"
-noise = "student"
-seed = 20260101
-"""
 
 
 def _teasel_rows(field_T: float, truth: StateTruth, rng: np.random.Generator) -> str:
@@ -430,13 +322,13 @@ def _teasel_2(seed: int) -> dict[str, bytes]:
     """A table of minima."""
     states = teasel_states()
     streams = np.random.SeedSequence(seed).spawn(len(states))
-    table = f"# {_MARK}\nfilling,field_T,temperature_K,temperature_error_K,rho_xx_ohm,rho_xx_ohm_error\n"
+    table = f"# {MARK}\nfilling,field_T,temperature_K,temperature_error_K,rho_xx_ohm,rho_xx_ohm_error\n"
     for (field_T, truth), stream in zip(states, streams, strict=True):
         table += _teasel_rows(field_T, truth, np.random.default_rng(stream))
     looked_for = {truth.filling for _, truth in states}
     records = [_state_record(truth, field_T, looked_for) for field_T, truth in states]
     truth_file = _json(_truth_head("teasel-2", seed) | {"states": records})
-    return {"minima.csv": table.encode(), "study.toml": _TEASEL_STUDY.encode(), "truth.json": truth_file}
+    return {"minima.csv": table.encode(), "study.toml": TEASEL_STUDY.encode(), "truth.json": truth_file}
 
 
 _MAKERS: dict[str, Callable[[int], dict[str, bytes]]] = {
