@@ -184,7 +184,7 @@ def harebell_trace(field_T: np.ndarray, temperature_K: float) -> tuple[np.ndarra
 
 @pytest.mark.parametrize("sample", [HAREBELL_3, HAREBELL_4])
 def test_trace_at_exact_filling_is_the_temperature_curve(sample: Any) -> None:
-    """Neighbours and the last trace of oscillations disturb no state at its own filling, at any temperature."""
+    """Neighbours and remnants of oscillations disturb no state at its own filling, at any temperature."""
     temperature = np.array(sample.temperatures_K)
     for truth in harebell_states(sample):
         if truth.filling > 1:  # there the background oscillates with temperature
