@@ -126,22 +126,42 @@ def units_of(dimension: str | Sequence[str]) -> tuple[str, ...]:
     return tuple(name for name, unit in UNITS.items() if unit.dimension in wanted)
 
 
-_KINDS = (
-    (
-        "temperature",
-        re.compile(r"t\d*|t_?(?:mc|bath|sample|plate|mix|probe)|temp.*|.*temperature.*|thermo.*"),
-    ),
-    (
-        "field",
-        re.compile(r"b\d*|h|b_?(?:z|perp|tot|field)|(?:.*[_ ])?(?:field|magnet)(?:[_ ].*)?|mag_?field"),
-    ),
-    ("time", re.compile(r"time.*|t_s|sec(?:onds)?|elapsed.*|timestamp")),
-    ("current", re.compile(r"i\d*|i_?(?:sd|ds|xx|exc|bias|drive|ac)|.*current.*|excitation")),
-    ("gate", re.compile(r"v_?(?:g|bg|tg|gate|back|top).*|.*gate.*")),
-    ("density", re.compile(r"n|n_?2d|n_?s|density.*|carrier.*")),
-    ("resistance", re.compile(r"r(?:xx|xy|yx|yy|h|hall|\d*)?|rho.*|.*resist.*|r_?(?:xx|xy|yx|yy|hall)")),
-    ("conductance", re.compile(r"sigma.*|g(?:xx|xy)?|.*conduct.*")),
-    ("voltage", re.compile(r"v.*|u(?:xx|xy)?|.*volt.*|[xy]\d*|lock-?in.*|lia.*|(?:.*_)?[xy]|.*hall.*")),
+_KINDS = tuple(
+    (kind, re.compile("|".join(patterns)))
+    for kind, patterns in (
+        (
+            "temperature",
+            (r"t\d*", r"t_?(?:mc|bath|sample|plate|mix|probe)", r".*temp.*", r"thermo.*", r"bath.*"),
+        ),
+        (
+            "field",
+            (
+                r"b\d*",
+                r"h",
+                r"b_?(?:z|perp|tot|field|mag)",
+                r"(?:.*[_ ])?(?:mag_?)?field(?:[_ ].*)?",
+                r"magnet.*",
+            ),
+        ),
+        ("time", (r"time.*", r"t_s", r"sec(?:onds)?", r"elapsed.*")),
+        ("current", (r"i\d*", r"i_?(?:sd|ds|xx|exc|bias|drive|ac)", r".*current.*", r"excitation")),
+        ("gate", (r"v_?(?:g|bg|tg|gate|back|top).*", r".*gate.*")),
+        ("density", (r"n", r"n_?2d", r"n_?s", r"density.*", r"carrier.*")),
+        ("resistance", (r"r\d*", r"r_?(?:xx|xy|yx|yy|h|hall)", r"rho.*", r".*resist.*")),
+        ("conductance", (r"sigma.*", r"g_?(?:xx|xy)?", r".*conduct.*")),
+        (
+            "voltage",
+            (
+                r"v.*",
+                r"u_?(?:xx|xy|yx|yy|h)?(?:_.*)?",
+                r".*volt.*",
+                r"(?:.*_)?[xy]\d*",
+                r"lock-?in.*",
+                r"lia.*",
+                r".*hall.*",
+            ),
+        ),
+    )
 )
 
 

@@ -300,8 +300,10 @@ def find_heading(
         cells = _heading_cells(lines[i], layout)
         if cells is None or not _is_name_row(cells):
             continue
-        known = _recognised(cells)
-        score = 2 * known >= layout.width, not layout.dialect.is_comment(lines[i]), known
+        known, plain = _recognised(cells), not layout.dialect.is_comment(lines[i])
+        if known == 0 and not plain and layout.dialect.delimiter is None:
+            continue  # a remark that happens to have as many words as there are columns
+        score = 2 * known >= layout.width, plain, known
         if units is None and best is None and _is_unit_row(cells):
             units, units_line = cells, i
         elif best is None or score > best[0]:
