@@ -12,7 +12,7 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import lfilter, savgol_filter
+from scipy.signal import lfilter
 
 __all__ = [
     "Curve",
@@ -226,29 +226,30 @@ def interpolated(at: FloatArray, position: FloatArray, values: FloatArray, segme
 
 @dataclass(frozen=True, eq=False)
 class Curve:
-    """A smoothed trace on an even axis.
+    """A smoothed trace.
 
     Attributes
     ----------
     axis : ndarray[n_axis]
-        Evenly spaced, rising.
+        Rising, about as dense as the points or the step asked for.
     value, slope, curvature : ndarray[n_axis]
-        The trace and its derivatives by the axis, NaN in gaps and next to them.
-    noise : float
-        Standard error of the smoothed value, from the residuals.
+        The trace and its derivatives by the axis.
+    value_error, slope_error : ndarray[n_axis]
+        Standard errors of the first two, from the residuals around each place, for white noise.
     """
 
     axis: FloatArray
     value: FloatArray
     slope: FloatArray
     curvature: FloatArray
-    noise: float
+    value_error: FloatArray
+    slope_error: FloatArray
 
 
 def smooth_curve(
-    position: FloatArray, values: FloatArray, segment: IntArray, step: float, half_width: float
+    position: FloatArray, values: FloatArray, segment: IntArray, step: float, reach: int = 5
 ) -> Curve:
-    """Trace averaged into bins of an even axis and smoothed by local cubics.
+    """Trace averaged into bins where points are dense, then smoothed by local cubics.
 
     Parameters
     ----------
@@ -256,38 +257,50 @@ def smooth_curve(
         Rising.
     values : ndarray[n_point]
     segment : ndarray[n_point] of int
-        Numbers the pieces between gaps.
+        Numbers the pieces between gaps; pieces shorter than a window are left out.
     step : float
-        Spacing of the axis.
-    half_width : float
-        Half of the smoothing window.
+        Width of the bins.
+    reach : int
+        Bins on either side that a cubic is fitted to.
 
     Returns
     -------
     Curve
     """
-    axis = np.arange(np.ceil(position[0] / step), np.floor(position[-1] / step) + 1) * step
-    index = np.rint((position - axis[0]) / step).astype(int)
-    inside = (index >= 0) & (index < axis.size)
-    count = np.bincount(index[inside], minlength=axis.size)
-    total = np.bincount(index[inside], weights=values[inside], minlength=axis.size)
-    bridged = interpolated(axis, position, values, segment)
-    binned = np.where(np.isnan(bridged), np.nan, np.where(count > 0, total / np.maximum(count, 1), bridged))
-    window = 2 * max(3, round(half_width / step)) + 1
-    shape = (axis.size,)
-    parts = [np.full(shape, np.nan) for _ in range(3)]
-    for start, stop in _stretches(~np.isnan(binned)):
-        if stop - start >= window:
-            for order, part in enumerate(parts):
-                part[start:stop] = savgol_filter(binned[start:stop], window, 3, deriv=order, delta=step)
-    residual = (values - interpolated(position, axis, parts[0], np.zeros(axis.size, dtype=np.int64)))
-    residual = residual[np.isfinite(residual)]
-    spread = 1.4826 * float(np.median(np.abs(residual))) if residual.size else 0.0
-    per_window = max(1.0, position.size * window / axis.size)
-    return Curve(axis, parts[0], parts[1], parts[2], spread * float(np.sqrt(2.25 / per_window)))
+    pieces = []
+    for number in np.unique(segment):
+        inside = segment == number
+        bins = np.floor(position[inside] / step).astype(np.int64)
+        _, index, count = np.unique(bins, return_inverse=True, return_counts=True)
+        if count.size < 2 * reach + 1:
+            continue
+        place = np.bincount(index, weights=position[inside]) / count
+        reading = np.bincount(index, weights=values[inside]) / count
+        pieces.append(np.stack((place, *_local_cubics(place, reading, reach))))
+    if not pieces:
+        return Curve(*(np.array([]) for _ in range(6)))
+    return Curve(*np.concatenate(pieces, axis=1))
 
 
-def _stretches(mask: NDArray[np.bool_]) -> list[tuple[int, int]]:
-    """Start and stop of each stretch of True."""
-    change = np.diff(np.concatenate(([False], mask, [False])).astype(np.int8))
-    return list(zip(np.flatnonzero(change == 1).tolist(), np.flatnonzero(change == -1).tolist(), strict=True))
+def _local_cubics(place: FloatArray, reading: FloatArray, reach: int) -> tuple[FloatArray, ...]:
+    """Value, slope, curvature, and errors of value and slope at each place."""
+    size = 2 * reach + 1
+    first = np.clip(np.arange(place.size) - reach, 0, place.size - size)
+    window = first[:, None] + np.arange(size)
+    distance = place[window] - place[:, None]
+    scale = np.abs(distance).max(axis=1)
+    basis = (distance / scale[:, None])[..., None] ** np.arange(4)
+    inverse = np.linalg.inv(np.swapaxes(basis, 1, 2) @ basis)
+    answer = (inverse @ (np.swapaxes(basis, 1, 2) @ reading[window][..., None]))[..., 0]
+    residual = reading[window] - (basis @ answer[..., None])[..., 0]
+    variance = np.sum(residual**2, axis=1) / (size - 4)
+    broad = min(41, variance.size)
+    variance = np.convolve(np.pad(variance, broad // 2, mode="edge"), np.full(broad, 1 / broad), mode="same")
+    spread = np.sqrt(variance[broad // 2 : broad // 2 + place.size])
+    return (
+        answer[:, 0],
+        answer[:, 1] / scale,
+        2 * answer[:, 2] / scale**2,
+        spread * np.sqrt(inverse[:, 0, 0]),
+        spread * np.sqrt(inverse[:, 1, 1]) / scale,
+    )
