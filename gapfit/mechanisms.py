@@ -1,19 +1,13 @@
-"""Transport mechanisms: pure functions of temperature, and the table that names their parameters.
+"""Transport mechanisms: the laws, the table that names their parameters, and their combinations.
 
-A reading is a sum of contributions (mechanisms add in sigma_xx, and in rho_xx as long as rho_xx << rho_xy):
-
-    y(T) = activation (closed at high T by the background) + hopping + nearest-neighbour hopping
-           + leak + offset + gapless level,           all at the electron temperature T_e(T).
-
-Every contribution is described by its size at a reference temperature, so that amplitude and energy decorrelate.
-The state of a model is a vector of *coordinates*, one per row of `PARAMETERS`: the logarithm of positive quantities, the
-quantity itself otherwise. A mechanism that is off has its coordinate where its contribution vanishes (`OFF`), so one
-function, `evaluate`, serves every combination, vectorised over draws and temperatures.
+A reading is a sum of contributions; mechanisms add in sigma_xx, and in rho_xx as long as rho_xx <<
+rho_xy. `gapfit.curve` puts the sum together.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from itertools import product
 
 import numpy as np
@@ -27,13 +21,10 @@ __all__ = [
     "OFF",
     "PARAMETERS",
     "Combination",
-    "Curve",
     "Parameter",
-    "Reference",
     "activation",
     "efros_shklovskii",
     "electron_temperature",
-    "evaluate",
     "fermi",
     "mott",
     "nearest_neighbour",
@@ -66,7 +57,7 @@ def activation(temperature: ArrayLike, gap: ArrayLike, prefactor: ArrayLike) -> 
     ndarray, ohm or S
     """
     temperature, gap = np.asarray(temperature, float), np.asarray(gap, float)
-    return np.asarray(prefactor) * np.exp(-gap / (2 * temperature))
+    return np.asarray(np.asarray(prefactor) * np.exp(-gap / (2 * temperature)))
 
 
 def fermi(temperature: ArrayLike, gap: ArrayLike, amplitude: ArrayLike) -> FloatArray:
@@ -88,14 +79,14 @@ def fermi(temperature: ArrayLike, gap: ArrayLike, amplitude: ArrayLike) -> Float
     ndarray, ohm or S
     """
     argument = np.asarray(gap, float) / (2 * np.asarray(temperature, float))
-    return 2 * np.asarray(amplitude) / (1 + np.exp(np.minimum(argument, LARGEST_EXPONENT)))
+    return np.asarray(2 * np.asarray(amplitude) / (1 + np.exp(np.minimum(argument, LARGEST_EXPONENT))))
 
 
 def power_mean(activated: ArrayLike, background: ArrayLike, sharpness: ArrayLike) -> FloatArray:
     """Closure at high temperature, 1/y^k = 1/activated^k + 1/background^k.
 
-    Sharpness k = 1 is the series limit. The power mean follows tanh, 1 - exp and arctan roll-overs closely, but none
-    of them is exact for a real sample.
+    Sharpness k = 1 is the series limit. The power mean follows tanh, 1 - exp and arctan roll-overs
+    closely, but none of them is exact for a real sample.
 
     Parameters
     ----------
@@ -111,7 +102,7 @@ def power_mean(activated: ArrayLike, background: ArrayLike, sharpness: ArrayLike
     ndarray, ohm or S
     """
     k = np.asarray(sharpness, float)
-    return np.exp(-np.logaddexp(-k * np.log(activated), -k * np.log(background)) / k)
+    return np.asarray(np.exp(-np.logaddexp(-k * np.log(activated), -k * np.log(background)) / k))
 
 
 def efros_shklovskii(
@@ -168,9 +159,8 @@ def _hopping(
     temperature: ArrayLike, scale: ArrayLike, amplitude: ArrayLike, power: float, exponent: float
 ) -> FloatArray:
     temperature = np.asarray(temperature, float)
-    return (
-        np.asarray(amplitude) / temperature**power * np.exp(-((np.asarray(scale) / temperature) ** exponent))
-    )
+    decay = np.exp(-((np.asarray(scale) / temperature) ** exponent))
+    return np.asarray(np.asarray(amplitude) / temperature**power * decay)
 
 
 def nearest_neighbour(temperature: ArrayLike, energy: ArrayLike, prefactor: ArrayLike) -> FloatArray:
@@ -189,7 +179,8 @@ def nearest_neighbour(temperature: ArrayLike, energy: ArrayLike, prefactor: Arra
     -------
     ndarray, ohm or S
     """
-    return np.asarray(prefactor) * np.exp(-np.asarray(energy, float) / np.asarray(temperature, float))
+    decay = np.exp(-np.asarray(energy, float) / np.asarray(temperature, float))
+    return np.asarray(np.asarray(prefactor) * decay)
 
 
 def electron_temperature(temperature: ArrayLike, saturation: ArrayLike, exponent: float = 4.0) -> FloatArray:
@@ -202,14 +193,15 @@ def electron_temperature(temperature: ArrayLike, saturation: ArrayLike, exponent
     saturation : array_like, K
         T_0, at which the electrons stop cooling.
     exponent : float
-        n, from 2 (cooling through the leads) over 4 (T_e ~ I^0.5: Chow et al., Phys. Rev. Lett. 77, 1143 (1996)) to 6.
+        n, from 2 (cooling through the leads) over 4 (T_e ~ I^0.5: Chow et al., Phys. Rev. Lett. 77, 1143
+        (1996)) to 6.
 
     Returns
     -------
     ndarray, K
     """
     n = exponent
-    return (np.asarray(temperature, float) ** n + np.asarray(saturation, float) ** n) ** (1 / n)
+    return np.asarray((np.asarray(temperature, float) ** n + np.asarray(saturation, float) ** n) ** (1 / n))
 
 
 # ------------------------------------------------------------------------------------------------ the table
@@ -279,8 +271,6 @@ SLOT: dict[str, int] = {parameter.name: index for index, parameter in enumerate(
 OFF: FloatArray = np.array([parameter.off for parameter in PARAMETERS])
 """Coordinate vector of a model in which every mechanism is off."""
 
-_G, _A, _B, _K, _H, _HT, _HX, _N, _NR, _L, _O, _E, _F, _P, _S, _I = range(len(PARAMETERS))
-
 MECHANISMS: dict[str, tuple[str, ...]] = {
     "activation": ("gap_K", "activated"),
     "roll-over": ("background", "sharpness"),
@@ -313,7 +303,12 @@ _WORDS = {
 }
 _NEEDS_ACTIVATION = {"roll-over", "fermi", "spread", "nearest"}
 _CARRIERS = {"activation", "es", "mott", "constant", "power law"}
-_EXCLUSIVE = ({"roll-over", "fermi"}, {"es", "mott"}, {"leak", "offset"}, {"constant", "power law", "activation"})
+_EXCLUSIVE = (
+    {"roll-over", "fermi"},
+    {"es", "mott"},
+    {"leak", "offset"},
+    {"constant", "power law", "activation"},
+)
 
 
 @dataclass(frozen=True)
@@ -348,7 +343,7 @@ class Combination:
         if "activation" not in present and present & _NEEDS_ACTIVATION:
             raise InputError(f"{sorted(present & _NEEDS_ACTIVATION)[0]} makes sense with activation only")
 
-    @property
+    @cached_property
     def name(self) -> str:
         """Key such as ``"activation + es + leak"``, as `parse_combination` reads it."""
         return " + ".join(self.mechanisms)
@@ -358,17 +353,17 @@ class Combination:
         """Words for figures and reports."""
         return " + ".join(_WORDS[name] for name in self.mechanisms)
 
-    @property
+    @cached_property
     def activated(self) -> bool:
         """Whether the combination has a gap."""
         return "activation" in self.mechanisms
 
-    @property
+    @cached_property
     def tied(self) -> bool:
         """Whether the background is tied to the prefactor (Fermi form)."""
         return "fermi" in self.mechanisms
 
-    @property
+    @cached_property
     def hopping(self) -> str:
         """``"es"``, ``"mott"`` or the empty string."""
         return next((name for name in ("es", "mott") if name in self.mechanisms), "")
@@ -378,20 +373,20 @@ class Combination:
         """Number of mechanisms beyond the one that carries the curve."""
         return len(self.mechanisms) - 1
 
-    @property
+    @cached_property
     def slots(self) -> NDArray[np.intp]:
         """Positions of the fitted parameters in the coordinate vector, noise inflation last."""
         names = [name for key in self.mechanisms for name in MECHANISMS[key]]
-        return np.array([SLOT[name] for name in names] + [_I], dtype=np.intp)
+        return np.array([SLOT[name] for name in names] + [SLOT["inflation"]], dtype=np.intp)
 
-    @property
+    @cached_property
     def base(self) -> FloatArray:
         """Coordinate vector with every mechanism off and the hopping exponent of this combination."""
         coordinates = OFF.copy()
         if self.tied:
-            coordinates[_B] = np.nan
+            coordinates[SLOT["background"]] = np.nan
         if self.hopping == "mott":
-            coordinates[_HX] = 1 / 3
+            coordinates[SLOT["hopping_exponent"]] = 1 / 3
         return coordinates
 
 
@@ -426,212 +421,3 @@ def _default_combinations() -> tuple[Combination, ...]:
 
 COMBINATIONS: tuple[Combination, ...] = _default_combinations()
 """The combinations that are averaged by default."""
-
-
-# --------------------------------------------------------------------------------------------- the full curve
-
-
-@dataclass(frozen=True)
-class Reference:
-    """Reference temperatures and fixed exponents of a model.
-
-    Attributes
-    ----------
-    high_K : float, K
-        Where the activated contribution is quoted.
-    low_K : float, K
-        Where hopping and the gapless level are quoted.
-    hopping_power : float
-        Power m of the hopping prefactor 1/T^m.
-    saturation_exponent : float
-        n of the electron temperature.
-    """
-
-    high_K: float
-    low_K: float
-    hopping_power: float = 1.0
-    saturation_exponent: float = 4.0
-
-
-@dataclass(frozen=True)
-class Curve:
-    """Curves of a batch of models and their derivatives.
-
-    Attributes
-    ----------
-    total : ndarray[n_draw, n_temperature], ohm or S
-    slope : ndarray[n_draw, n_temperature], ohm or S
-        d total / d ln T.
-    parts : dict of str to ndarray[n_draw, n_temperature], ohm or S
-        ``activation`` (closed), ``hopping``, ``nearest``, ``constant`` (leak, offset and level).
-    jacobian : ndarray[n_draw, n_temperature, n_parameter] or None
-        d total / d coordinate.
-    """
-
-    total: FloatArray
-    slope: FloatArray
-    parts: dict[str, FloatArray]
-    jacobian: FloatArray | None = None
-
-
-def log_prefactor(coordinates: FloatArray, reference: Reference) -> FloatArray:
-    """Logarithm of the activated prefactor at 1/T = 0.
-
-    Parameters
-    ----------
-    coordinates : ndarray[n_draw, n_parameter]
-    reference : Reference
-
-    Returns
-    -------
-    ndarray[n_draw]
-        ln of ohm or S.
-    """
-    gap = _exp(coordinates[:, _G])
-    spread = gap * _exp(coordinates[:, _S])
-    return np.asarray(
-        coordinates[:, _A] + gap / (2 * reference.high_K) - spread**2 / (8 * reference.high_K**2)
-    )
-
-
-def evaluate(
-    coordinates: FloatArray, temperature: FloatArray, reference: Reference, jacobian: bool = False
-) -> Curve:
-    """Curves of a batch of models.
-
-    Parameters
-    ----------
-    coordinates : ndarray[n_draw, n_parameter]
-        Coordinate vectors; a background of NaN is tied to the prefactor (Fermi form).
-    temperature : ndarray[n_temperature], K
-        Bath temperatures.
-    reference : Reference
-        Reference temperatures and exponents.
-    jacobian : bool
-        Whether to return derivatives by the coordinates too.
-
-    Returns
-    -------
-    Curve
-
-    Notes
-    -----
-    Exponents are capped at 600 so that absurd draws give absurdly large finite readings, not overflow.
-    """
-    x = coordinates[:, :, None]
-    tied = np.isnan(coordinates[:, _B])
-    if tied.any():
-        x = x.copy()
-        x[tied, _B, 0] = log_prefactor(coordinates[tied], reference)
-    hot, q = _electrons(x[:, _E], temperature, reference)
-    columns: dict[int, FloatArray] = {}
-    active, d_active = _activated(x, hot, reference, columns)
-    hop, d_hop = _variable_range(x, hot, reference, columns)
-    near, d_near = _nearest(x, hot, reference, columns)
-    level, d_level = _level(x, hot, reference, columns)
-    leak = _exp(x[:, _L])
-    constant = leak + x[:, _O] + level
-    by_electrons = d_active + d_hop + d_near + d_level
-    total = active + hop + near + constant
-    parts = {"activation": active, "hopping": hop, "nearest": near, "constant": constant + 0 * total}
-    slope = by_electrons * (1 - q)
-    if not jacobian:
-        return Curve(total, slope, parts)
-    columns |= {_L: leak, _O: np.ones_like(leak), _E: by_electrons * q}
-    matrix = np.zeros((*total.shape, len(PARAMETERS)))
-    for slot, column in columns.items():
-        matrix[:, :, slot] = column
-    if tied.any():
-        _tie_background(matrix, x, tied, reference)
-    return Curve(total, slope, parts, matrix)
-
-
-def _exp(exponent: FloatArray) -> FloatArray:
-    return np.exp(np.minimum(exponent, LARGEST_EXPONENT))
-
-
-def _electrons(log_t0: FloatArray, temperature: FloatArray, reference: Reference) -> tuple[FloatArray, FloatArray]:
-    """Electron temperature and d ln T_e / d ln T_0."""
-    if (log_t0 <= -FAR).all():
-        return temperature[None, :], np.zeros((1, 1))
-    n = reference.saturation_exponent
-    excess = _exp(n * (log_t0 - np.log(temperature)))
-    return temperature * (1 + excess) ** (1 / n), excess / (1 + excess)
-
-
-def _activated(
-    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
-) -> tuple[FloatArray, FloatArray]:
-    """Activated contribution with closure, and its derivative by ln T_e."""
-    half = _exp(x[:, _G]) / 2
-    variance = (2 * half * _exp(x[:, _S])) ** 2 / 4
-    inverse = 1 / hot
-    by_gap = -half * (inverse - 1 / reference.high_K) + variance * (inverse**2 - 1 / reference.high_K**2)
-    by_spread = variance * (inverse**2 - 1 / reference.high_K**2)
-    log_active = np.minimum(x[:, _A] + by_gap - by_spread / 2, LARGEST_EXPONENT)
-    background, k = x[:, _B], _exp(x[:, _K])
-    if (background >= FAR).all():
-        value, share = np.exp(log_active), np.ones((1, 1))
-    else:
-        difference = k * (log_active - background)
-        share = 1 / (1 + _exp(difference))
-        log_value = background - np.logaddexp(0.0, -difference) / k
-        value = np.exp(log_value)
-        columns[_B] = value * (1 - share)
-        columns[_K] = value * (background - log_value + share * (log_active - background))
-    columns |= {_G: value * share * by_gap, _A: value * share, _S: value * share * by_spread}
-    return value, value * share * (half * inverse - variance * inverse**2)
-
-
-def _variable_range(
-    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
-) -> tuple[FloatArray, FloatArray]:
-    """Variable-range hopping and its derivative by ln T_e."""
-    if (x[:, _H] <= -FAR).all():
-        return np.zeros((1, 1)), np.zeros((1, 1))
-    m, alpha = reference.hopping_power, x[:, _HX]
-    at_low = _exp(alpha * (x[:, _HT] - np.log(reference.low_K)))
-    at_hot = _exp(alpha * (x[:, _HT] - np.log(hot)))
-    value = _exp(x[:, _H] - (at_hot - at_low) - m * np.log(hot / reference.low_K))
-    columns |= {_H: value, _HT: -value * alpha * (at_hot - at_low)}
-    return value, value * (alpha * at_hot - m)
-
-
-def _nearest(
-    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
-) -> tuple[FloatArray, FloatArray]:
-    """Nearest-neighbour hopping and its derivative by ln T_e."""
-    if (x[:, _N] <= -FAR).all():
-        return np.zeros((1, 1)), np.zeros((1, 1))
-    logistic = 1 / (1 + np.exp(-np.clip(x[:, _NR], -LARGEST_EXPONENT, LARGEST_EXPONENT)))
-    energy = _exp(x[:, _G]) * logistic / 4
-    by_energy = -energy * (1 / hot - 1 / reference.low_K)
-    value = _exp(x[:, _N] + by_energy)
-    columns |= {_N: value, _NR: value * by_energy * (1 - logistic)}
-    columns[_G] = columns[_G] + value * by_energy
-    return value, value * energy / hot
-
-
-def _level(
-    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray]
-) -> tuple[FloatArray, FloatArray]:
-    """Gapless level with a power of temperature, and its derivative by ln T_e."""
-    if (x[:, _F] <= -FAR).all():
-        return np.zeros((1, 1)), np.zeros((1, 1))
-    ratio = np.log(hot / reference.low_K)
-    value = _exp(x[:, _F] + x[:, _P] * ratio)
-    columns |= {_F: value, _P: value * ratio}
-    return value, value * x[:, _P]
-
-
-def _tie_background(
-    matrix: FloatArray, x: FloatArray, tied: NDArray[np.bool_], reference: Reference
-) -> None:
-    """Carry the derivative by the tied background over to gap and amplitude, in place."""
-    through = matrix[tied, :, _B]
-    gap = _exp(x[tied, _G])
-    variance = (gap * _exp(x[tied, _S])) ** 2 / 4 / reference.high_K**2
-    matrix[tied, :, _A] += through
-    matrix[tied, :, _G] += through * (gap / (2 * reference.high_K) - variance)
-    matrix[tied, :, _S] -= through * variance
-    matrix[tied, :, _B] = 0.0

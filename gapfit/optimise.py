@@ -51,8 +51,9 @@ def minimise(
     Parameters
     ----------
     objective : callable
-        Takes positions ndarray[n, n_parameter] and the indices ndarray[n] of the starts that they belong to; returns
-        cost ndarray[n], gradient ndarray[n, n_parameter] and positive curvature ndarray[n, n_parameter, n_parameter].
+        Takes positions ndarray[n, n_parameter] and the indices ndarray[n] of the starts that they belong
+        to; returns cost ndarray[n], gradient ndarray[n, n_parameter] and positive curvature ndarray[n,
+        n_parameter, n_parameter].
     start : ndarray[n_start, n_parameter]
         Starting positions.
     tolerance : float
@@ -66,8 +67,8 @@ def minimise(
 
     Notes
     -----
-    Marquardt's scaling of the damping by the largest diagonal met so far (More 1978), and Nielsen's rule for its size
-    (IMM-REP-1999-05): the damping follows the ratio of true to predicted decrease.
+    Marquardt's scaling of the damping by the largest diagonal met so far (More 1978), and Nielsen's rule
+    for its size (IMM-REP-1999-05): the damping follows the ratio of true to predicted decrease.
     """
     position = np.array(start, dtype=float)
     everyone = np.arange(len(position))
@@ -106,10 +107,8 @@ def _step(gradient: FloatArray, curvature: FloatArray, damping: FloatArray) -> t
     """Damped step and the decrease that the quadratic model predicts for it."""
     damped = curvature + np.eye(gradient.shape[1]) * (damping[:, None, :] + 1e-300)
     step = -np.linalg.solve(damped, gradient[:, :, None])[:, :, 0]
-    predicted = -np.einsum("ni,ni->n", gradient, step) - 0.5 * np.einsum(
-        "ni,nij,nj->n", step, curvature, step
-    )
-    return step, predicted
+    bent = np.einsum("ni,nij,nj->n", step, curvature, step)
+    return np.asarray(step), np.asarray(-np.einsum("ni,ni->n", gradient, step) - 0.5 * bent)
 
 
 def least_squares_objective(
@@ -129,9 +128,7 @@ def least_squares_objective(
         As `minimise` wants it.
     """
 
-    def objective(
-        position: FloatArray, _: NDArray[np.intp]
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+    def objective(position: FloatArray, _: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, FloatArray]:
         r, jacobian = residual(position)
         with np.errstate(over="ignore", invalid="ignore"):
             cost = 0.5 * np.sum(r**2, axis=1)

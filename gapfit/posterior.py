@@ -1,12 +1,14 @@
 """Posterior of one combination of mechanisms, with the temperature window summed inside the likelihood.
 
-A *member* is a combination together with a window (the readings between a lower and an upper cut). For one combination the
-sum over windows is one smooth likelihood, and which window a draw belongs to is a latent variable with its own posterior:
+A *member* is a combination together with a window (the readings between a lower and an upper cut). For
+one combination the sum over windows is one smooth likelihood, and which window a draw belongs to is a
+latent variable with its own posterior:
 
     ln L(theta) = ln sum_w exp[ sum_{i in w} l_i(theta) - cost * (number of readings cut by w) ].
 
-The terms l_i are normalised so that a zero residual at the stated error counts zero; a reading that is kept therefore pays for
-its misfit, one that is cut pays the cost (the reasoning of Jay & Neil, Phys. Rev. D 103, 114502 (2021), with a higher cost).
+The terms l_i are normalised so that a zero residual at the stated error counts zero; a reading that is
+kept therefore pays for its misfit, one that is cut pays the cost (the reasoning of Jay & Neil, Phys.
+Rev. D 103, 114502 (2021), with a higher cost).
 """
 
 from __future__ import annotations
@@ -18,8 +20,9 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.special import logsumexp
 
+from gapfit.curve import Curve, Reference, evaluate
 from gapfit.errors import InputError, NotEnoughData
-from gapfit.mechanisms import PARAMETERS, SLOT, Combination, Curve, Reference, evaluate
+from gapfit.mechanisms import PARAMETERS, SLOT, Combination
 from gapfit.priors import Prior, prior_at_data_scale, reference_of
 from gapfit.series import TemperatureSeries
 
@@ -36,7 +39,15 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 
 STUDENT_DEGREES = 5.0
-"""Degrees of freedom of the Student-t noise: heavy enough for single outliers, close enough to normal otherwise."""
+"""Degrees of freedom of the Student-t noise: heavy enough for single outliers, nearly normal otherwise."""
+
+STUDENT_SCALE = 0.85662
+"""Scale of the Student-t distribution that fits normal noise of unit variance best.
+
+It solves E[(n + 1) x^2 / (n t^2 + x^2)] = 1 for standard normal x, so that a noise inflation of one means what it says.
+"""
+
+_STUDENT_WIDTH = STUDENT_DEGREES * STUDENT_SCALE**2
 
 LARGEST_CUT_COUNT = 16
 _INFLATION = SLOT["inflation"]
@@ -94,7 +105,7 @@ def every_window(n_point: int, cost: float, min_points: int = 4) -> Windows:
     edges = np.arange(n_point + 1)
     if n_point > LARGEST_CUT_COUNT:
         edges = np.unique(np.linspace(0, n_point, LARGEST_CUT_COUNT + 1).round().astype(int))
-    pairs = [(a, b) for a in edges for b in edges if b - a >= min(min_points, n_point)]
+    pairs = [(int(a), int(b)) for a in edges for b in edges if b - a >= min(min_points, n_point)]
     return _windows([a for a, _ in pairs], [b for _, b in pairs], n_point, cost)
 
 
@@ -184,7 +195,7 @@ class Problem:
 
     def _terms(self, squared: FloatArray, variance: FloatArray) -> FloatArray:
         if self.student:
-            fit = -(STUDENT_DEGREES + 1) / 2 * np.log1p(squared / STUDENT_DEGREES)
+            fit = -(STUDENT_DEGREES + 1) / 2 * np.log1p(squared / _STUDENT_WIDTH)
         else:
             fit = -squared / 2
         return np.asarray(fit - np.log(variance) / 2)
@@ -211,8 +222,9 @@ class Problem:
         value : ndarray[n_draw]
         gradient : ndarray[n_draw, n_parameter]
         curvature : ndarray[n_draw, n_parameter, n_parameter]
-            Gauss-Newton curvature with the readings weighted by their noise weight and by the share of the windows
-            that keep them; the dependence of the effective variance on the curve is left out of both.
+            Gauss-Newton curvature with the readings weighted by their noise weight and by the share of
+            the windows that keep them; the dependence of the effective variance on the curve is left out
+            of both.
         """
         curve = self.curve(coordinates, jacobian=True)
         variance = self._variance(coordinates, curve)
@@ -223,7 +235,7 @@ class Problem:
         share = np.exp(terms - value[:, None]) @ self.windows.kept
         weight = share
         if self.student:
-            weight = share * (STUDENT_DEGREES + 1) / (STUDENT_DEGREES + squared)
+            weight = share * (STUDENT_DEGREES + 1) / (_STUDENT_WIDTH + squared)
         slopes = curve.jacobian / self.series.error[:, None]  # type: ignore[operator]
         gradient = np.einsum("np,npi->ni", weight * residual / variance, slopes)
         scaled = slopes * np.sqrt(weight / variance)[:, :, None]
@@ -236,7 +248,7 @@ class Problem:
 
 
 def _log_sum(terms: FloatArray) -> FloatArray:
-    """logsumexp over the last axis, without the overhead of the general one."""
+    """Logsumexp over the last axis, without the overhead of the general one."""
     if terms.shape[1] == 1:
         return terms[:, 0]
     largest = terms.max(axis=1)
@@ -338,8 +350,8 @@ def pooled_objective(
     Returns
     -------
     callable
-        Takes whitened vectors over *all* parameters, ndarray[n, n_parameter], and row numbers; entries that a
-        combination does not fit are held by their prior alone and rest at zero.
+        Takes whitened vectors over *all* parameters, ndarray[n, n_parameter], and row numbers; entries
+        that a combination does not fit are held by their prior alone and rest at zero.
     """
     fitted = np.zeros((len(combinations), len(PARAMETERS)), dtype=bool)
     base = np.empty((len(combinations), len(PARAMETERS)))
@@ -348,9 +360,7 @@ def pooled_objective(
         base[row] = combination.base
     centre, width = problem.prior.centre, problem.prior.width
 
-    def objective(
-        whitened: FloatArray, rows: NDArray[np.intp]
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, FloatArray]:
         scale = np.where(fitted[rows], width, 0.0)
         coordinates = np.where(fitted[rows], centre + width * whitened, base[rows])
         value, gradient, curvature = problem.log_likelihood_with_slopes(coordinates)
@@ -366,3 +376,23 @@ def pooled_objective(
 def log_mean_exp(terms: FloatArray) -> float:
     """Logarithm of the mean of exponentials."""
     return float(logsumexp(terms) - np.log(terms.size))
+
+
+def systematic_resample(weight: FloatArray, n_draw: int, rng: np.random.Generator) -> NDArray[np.intp]:
+    """Indices of draws of equal weight by systematic resampling.
+
+    Parameters
+    ----------
+    weight : ndarray[n]
+        Weights, not negative; they need not sum to one.
+    n_draw : int
+    rng : numpy.random.Generator
+
+    Returns
+    -------
+    ndarray[n_draw] of int
+        In rising order.
+    """
+    edges = np.cumsum(weight)
+    positions = (np.arange(n_draw) + rng.uniform()) / n_draw * edges[-1]
+    return np.asarray(np.minimum(np.searchsorted(edges, positions), weight.size - 1))

@@ -1,8 +1,9 @@
 """Priors: independent normal distributions of the coordinates, set once at the scale of the data.
 
-In whitened coordinates z = (x - centre) / width every prior is a standard normal, so a parameter that a combination does
-not have costs nothing, and prior draws are plain normal numbers. Contributions are given priors at a reference
-temperature, which decorrelates prefactor and gap. All of it is frozen in a `Prior` and printed with the results.
+In whitened coordinates z = (x - centre) / width every prior is a standard normal, so a parameter that a
+combination does not have costs nothing, and prior draws are plain normal numbers. Contributions are
+given priors at a reference temperature, which decorrelates prefactor and gap. All of it is frozen in a
+`Prior` and printed with the results.
 """
 
 from __future__ import annotations
@@ -12,7 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from gapfit.mechanisms import PARAMETERS, SLOT, Combination, Reference
+from gapfit.curve import Reference
+from gapfit.mechanisms import PARAMETERS, SLOT, Combination
 from gapfit.series import TemperatureSeries
 
 __all__ = ["Prior", "prior_at_data_scale", "reference_of"]
@@ -119,9 +121,10 @@ def prior_at_data_scale(series: TemperatureSeries, reference: Reference) -> Prio
 
     Notes
     -----
-    Widths are in units of the coordinate: a width of 2 on a logarithm is a factor of 7 either way at one standard
-    deviation. The gap is centred at four times the geometric mean of the temperatures with a factor of 4.5 either way, which
-    reaches from gaps too small for the range to gaps whose activated part covers the last two points only.
+    Widths are in units of the coordinate: a width of 2 on a logarithm is a factor of 7 either way at one
+    standard deviation. The gap is centred at four times the geometric mean of the temperatures with a
+    factor of 4.5 either way, which reaches from gaps too small for the range to gaps whose activated
+    part covers the last two points only.
     """
     low, high = float(series.temperature[0]), float(series.temperature[-1])
     middle = np.sqrt(low * high)

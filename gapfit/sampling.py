@@ -1,0 +1,285 @@
+"""The sampling engine: emcee on one combination, several independent ensembles, run until they agree.
+
+The first ensemble starts from the prior; the second is tempered from the prior to the posterior and
+never sees the fast engine's proposal; the others start from the modes found. All but the second mix an
+independence proposal, the Student-t mixture of the fast engine, with local ensemble moves. What the
+ensembles disagree about is therefore visible.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import emcee
+import numpy as np
+from numpy.typing import NDArray
+
+from gapfit.diagnostics import (
+    LARGEST_RHAT,
+    SMALLEST_ESS,
+    bulk_ess,
+    effective_weights,
+    nested_rhat,
+    tail_ess,
+)
+from gapfit.explore import Explored, Mixture, fit_mixture
+from gapfit.posterior import LogPosterior, log_mean_exp, log_standard_normal, systematic_resample
+
+__all__ = ["Chains", "SamplingRules", "bridge_evidence", "sample"]
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class SamplingRules:
+    """How long the sampler runs.
+
+    Attributes
+    ----------
+    n_walker : int
+        Walkers of an ensemble.
+    n_from_modes : int
+        Ensembles that start from the modes.
+    warm_up : int
+        Steps of the first round. Every round is twice as long as the one before and keeps its own draws
+        only; between rounds the proposal is fitted again.
+    max_steps : int
+        Steps after which the sampler gives up.
+    smallest_ess : float
+        Effective sample size, of bulk and tails, that it must reach.
+    """
+
+    n_walker: int = 128
+    n_from_modes: int = 2
+    warm_up: int = 50
+    max_steps: int = 3200
+    smallest_ess: float = SMALLEST_ESS
+
+
+@dataclass(frozen=True)
+class Chains:
+    """Draws of the ensembles in the last round; all rounds before are warm-up.
+
+    Attributes
+    ----------
+    whitened : ndarray[n_ensemble, n_step, n_walker, n_fitted]
+    log_posterior : ndarray[n_ensemble, n_step, n_walker]
+    rhat : float
+        Larger nested R-hat of the first parameter (ln gap, or what carries the curve) and the log
+        posterior.
+    ess : float
+        Smallest bulk or tail effective sample size of the two.
+    n_step : int
+        Steps of an ensemble, warm-up included.
+    reasons : tuple of str
+        Why it has not converged; empty when it has.
+    """
+
+    whitened: FloatArray
+    log_posterior: FloatArray
+    rhat: float
+    ess: float
+    n_step: int
+    reasons: tuple[str, ...]
+
+    def flat(self, n_draw: int) -> tuple[FloatArray, FloatArray]:
+        """At most so many draws and their log posteriors, evenly thinned."""
+        draws = self.whitened.reshape(-1, self.whitened.shape[-1])
+        chosen = np.unique(np.linspace(0, len(draws) - 1, min(n_draw, len(draws))).astype(int))
+        return draws[chosen], self.log_posterior.reshape(-1)[chosen]
+
+
+def sample(
+    posterior: LogPosterior, explored: Explored, rules: SamplingRules, seed: np.random.SeedSequence
+) -> Chains:
+    """Sample one combination until the ensembles agree or the limit is reached.
+
+    Parameters
+    ----------
+    posterior : LogPosterior
+    explored : Explored
+        What the fast engine found for the same combination.
+    rules : SamplingRules
+    seed : numpy.random.SeedSequence
+
+    Returns
+    -------
+    Chains
+    """
+    seeds = seed.spawn(2 + rules.n_from_modes)
+    states = [np.random.RandomState(np.random.MT19937(child)).get_state() for child in seeds]
+    rngs = [np.random.default_rng(child.spawn(1)[0]) for child in seeds]
+    positions = [
+        rngs[0].standard_normal((rules.n_walker, posterior.n_fitted)),
+        _tempered_from_prior(posterior, rules.n_walker, rngs[1]),
+        *[_around_modes(explored, rules.n_walker, rng) for rng in rngs[2:]],
+    ]
+    proposal, n_step, total = explored.proposal, rules.warm_up, 0
+    while True:
+        ensembles = [
+            _advance(posterior, None if index == BLIND else proposal, position, state, n_step)
+            for index, (position, state) in enumerate(zip(positions, states, strict=True))
+        ]
+        total += n_step
+        chains = _summarise(ensembles, total, rules.smallest_ess)
+        if total > rules.warm_up and (not chains.reasons or total + 2 * n_step > rules.max_steps):
+            return chains
+        proposal = _adapted(chains, rngs[0])
+        positions = [ensemble.get_chain()[-1] for ensemble in ensembles]
+        states = [ensemble.random_state for ensemble in ensembles]
+        n_step *= 2
+
+
+def _advance(
+    posterior: LogPosterior, proposal: Mixture | None, position: FloatArray, state: Any, n_step: int
+) -> emcee.EnsembleSampler:
+    """One ensemble, moved on by some steps from a position and a state of its random numbers."""
+    sampler = emcee.EnsembleSampler(*position.shape, posterior, moves=_moves(proposal), vectorize=True)
+    sampler.random_state = state
+    sampler.run_mcmc(position, n_step, skip_initial_state_check=True)
+    return sampler
+
+
+def _adapted(chains: Chains, rng: np.random.Generator) -> Mixture:
+    """Proposal fitted to the draws of the ensembles that use one; those draws are then forgotten."""
+    informed = np.delete(chains.whitened, BLIND, axis=0)
+    draws = informed[:, informed.shape[1] // 2 :].reshape(-1, informed.shape[-1])
+    draws = draws[rng.integers(len(draws), size=ADAPTING_DRAWS)]
+    return fit_mixture(draws, np.full(len(draws), 1 / len(draws)), N_COMPONENT, 15, rng).widened()
+
+
+BLIND = 1
+ADAPTING_DRAWS = 3000
+N_COMPONENT = 6
+
+
+def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess: float) -> Chains:
+    whitened = np.stack([sampler.get_chain() for sampler in samplers])
+    log_posterior = np.stack([sampler.get_log_prob() for sampler in samplers])
+    watched = (whitened[..., 0], log_posterior)
+    rhat = max(nested_rhat(quantity) for quantity in watched)
+    ess = min(min(bulk_ess(quantity), tail_ess(quantity)) for quantity in watched)
+    reasons = []
+    if not rhat < LARGEST_RHAT:
+        reasons.append(f"nested R-hat {rhat:.3f} is not below {LARGEST_RHAT} after {n_step} steps")
+    if not ess >= smallest_ess:
+        reasons.append(f"effective sample size {ess:.0f} is below {smallest_ess:.0f} after {n_step} steps")
+    return Chains(whitened, log_posterior, rhat, ess, n_step, tuple(reasons))
+
+
+def _moves(proposal: Mixture | None) -> list[tuple[emcee.moves.Move, float]]:
+    local = [(emcee.moves.StretchMove(), 0.3), (emcee.moves.DEMove(), 0.7)]
+    if proposal is None:
+        return local
+
+    def jump(position: FloatArray, random: np.random.RandomState) -> tuple[FloatArray, FloatArray]:
+        rng = np.random.default_rng(random.randint(2**31 - 1, size=4))
+        offered = rng.permutation(proposal.sample(len(position), rng))
+        return offered, proposal.log_density(position) - proposal.log_density(offered)
+
+    return [(emcee.moves.MHMove(jump), 0.5), *((move, share / 2) for move, share in local)]
+
+
+def _tempered_from_prior(posterior: LogPosterior, n_walker: int, rng: np.random.Generator) -> FloatArray:
+    """Walkers from the prior by tempering the likelihood from power zero to one.
+
+    Resampling and local moves: Del Moral, Doucet & Jasra, J. R. Stat. Soc. B 68, 411 (2006); the powers keep half of the particles
+    effective. It knows nothing of the fast engine.
+    """
+    points = rng.standard_normal((N_PARTICLE, posterior.n_fitted))
+    log_posterior = posterior(points)
+    power = 0.0
+    while power < 1:
+        log_likelihood = log_posterior - log_standard_normal(points)
+        following = _next_power(log_likelihood, power)
+        weight = np.exp((following - power) * (log_likelihood - log_likelihood.max()))
+        chosen = systematic_resample(weight, N_PARTICLE, rng)
+        points, log_posterior, power = points[chosen], log_posterior[chosen], following
+        for stretch in STRETCHES:
+            points, log_posterior = _local_step(posterior, points, log_posterior, power, stretch, rng)
+    return np.asarray(points[rng.choice(N_PARTICLE, n_walker, replace=False)])
+
+
+N_PARTICLE = 1000
+STRETCHES = (1.0, 0.5, 0.25, 1.0)
+
+
+def _next_power(log_likelihood: FloatArray, power: float) -> float:
+    """Largest power at which the reweighted particles are still half effective."""
+    low, high = power, 1.0
+    if effective_weights((high - power) * log_likelihood) >= 0.5 * log_likelihood.size:
+        return 1.0
+    for _ in range(30):
+        middle = (low + high) / 2
+        if effective_weights((middle - power) * log_likelihood) >= 0.5 * log_likelihood.size:
+            low = middle
+        else:
+            high = middle
+    return max(low, power + 1e-6)
+
+
+def _local_step(
+    posterior: LogPosterior,
+    points: FloatArray,
+    log_posterior: FloatArray,
+    power: float,
+    stretch: float,
+    rng: np.random.Generator,
+) -> tuple[FloatArray, FloatArray]:
+    """One differential-evolution Metropolis step of all particles at a power of the likelihood."""
+    n_draw, n_dim = points.shape
+    first, second = rng.integers(n_draw, size=(2, n_draw))
+    size = stretch * 2.38 / np.sqrt(2 * n_dim)
+    offered = points + size * (points[first] - points[second]) + 1e-4 * rng.standard_normal(points.shape)
+    log_offered = posterior(offered)
+    change = power * (log_offered - log_posterior) + (1 - power) * (
+        log_standard_normal(offered) - log_standard_normal(points)
+    )
+    taken = np.log(rng.uniform(size=n_draw)) < change
+    return np.where(taken[:, None], offered, points), np.where(taken, log_offered, log_posterior)
+
+
+def _around_modes(explored: Explored, n_walker: int, rng: np.random.Generator) -> FloatArray:
+    """Walkers shared out among the modes, scattered by half of the prior's width."""
+    which = np.arange(n_walker) % len(explored.modes)
+    scatter = 0.5 * rng.standard_normal((n_walker, explored.modes.shape[1]))
+    return np.asarray(explored.modes[which] + scatter)
+
+
+def bridge_evidence(
+    explored: Explored, draws: FloatArray, log_posterior: FloatArray, effective: float
+) -> float:
+    """Log evidence from sampler draws and proposal draws together.
+
+    Parameters
+    ----------
+    explored : Explored
+        Gives the proposal and its draws.
+    draws : ndarray[n_draw, n_fitted]
+        Posterior draws of the sampler.
+    log_posterior : ndarray[n_draw]
+        Their log posterior densities, not normalised.
+    effective : float
+        Effective size of these draws.
+
+    Returns
+    -------
+    float
+
+    Notes
+    -----
+    Meng & Wong, Stat. Sinica 6, 831 (1996), the optimal bridge iterated to its fixed point.
+    """
+    by_proposal = explored.log_weight + explored.log_evidence + np.log(explored.log_weight.size)
+    by_posterior = log_posterior - explored.proposal.log_density(draws)
+    n_posterior, n_proposal = min(effective, float(len(draws))), float(by_proposal.size)
+    share = n_posterior / (n_posterior + n_proposal)
+    estimate = explored.log_evidence
+    for _ in range(100):
+        upper = -np.logaddexp(np.log(share), np.log(1 - share) + estimate - by_proposal)
+        lower = -np.logaddexp(np.log(share) + by_posterior, np.log(1 - share) + estimate)
+        previous, estimate = estimate, log_mean_exp(upper) - log_mean_exp(lower)
+        if abs(estimate - previous) < 1e-6:
+            break
+    return estimate
