@@ -166,14 +166,16 @@ def _reach_limit(filling: Fraction) -> float:
 def _reaches(fillings: list[Fraction]) -> dict[Fraction, tuple[float, float]]:
     """Reach below and above each filling: about half way to the neighbour, or the limit.
 
-    Plateaus of the highest denominators overlap a little; none reaches a neighbour's exact filling.
+    Plateaus of the highest denominators overlap a little; none reaches a neighbour's exact filling, and
+    none is much wider on one side than on the other.
     """
     walls = [Fraction(-99), *sorted(fillings), Fraction(99)]
     reaches = {}
     for below, here, above in zip(walls, walls[1:], walls[2:], strict=False):
         share = 0.5 if here.denominator < 9 else 0.62
         room = (share * float(here - below), share * float(above - here))
-        reaches[here] = (min(room[0], _reach_limit(here)), min(room[1], _reach_limit(here)))
+        limit = min(_reach_limit(here), 1.5 * min(room))
+        reaches[here] = (min(room[0], limit), min(room[1], limit))
     return reaches
 
 
