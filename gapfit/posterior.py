@@ -44,7 +44,8 @@ STUDENT_DEGREES = 5.0
 STUDENT_SCALE = 0.85662
 """Scale of the Student-t distribution that fits normal noise of unit variance best.
 
-It solves E[(n + 1) x^2 / (n t^2 + x^2)] = 1 for standard normal x, so that a noise inflation of one means what it says.
+It solves E[(n + 1) x^2 / (n t^2 + x^2)] = 1 for standard normal x, so that a noise inflation of one
+means what it says.
 """
 
 _STUDENT_WIDTH = STUDENT_DEGREES * STUDENT_SCALE**2
@@ -360,7 +361,8 @@ def pooled_objective(
         base[row] = combination.base
     centre, width = problem.prior.centre, problem.prior.width
 
-    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, FloatArray]:
+    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray,
+    FloatArray]:
         scale = np.where(fitted[rows], width, 0.0)
         coordinates = np.where(fitted[rows], centre + width * whitened, base[rows])
         value, gradient, curvature = problem.log_likelihood_with_slopes(coordinates)

@@ -184,8 +184,8 @@ def _moves(proposal: Mixture | None) -> list[tuple[emcee.moves.Move, float]]:
 def _tempered_from_prior(posterior: LogPosterior, n_walker: int, rng: np.random.Generator) -> FloatArray:
     """Walkers from the prior by tempering the likelihood from power zero to one.
 
-    Resampling and local moves: Del Moral, Doucet & Jasra, J. R. Stat. Soc. B 68, 411 (2006); the powers keep half of the particles
-    effective. It knows nothing of the fast engine.
+    Resampling and local moves: Del Moral, Doucet & Jasra, J. R. Stat. Soc. B 68, 411 (2006); the powers
+    keep half of the particles effective. It knows nothing of the fast engine.
     """
     points = rng.standard_normal((N_PARTICLE, posterior.n_fitted))
     log_posterior = posterior(points)

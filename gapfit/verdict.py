@@ -117,8 +117,8 @@ def predictive_p(problem: Problem, draws: MemberDraws) -> float:
     Returns
     -------
     float
-        NaN where no draw keeps half of the readings and half of the 1/T range. The discrepancy is chi-squared at the stated errors
-        (Gelman, Meng & Stern, Stat. Sinica 6, 733 (1996)).
+        NaN where no draw keeps half of the readings and half of the 1/T range. The discrepancy is
+        chi-squared at the stated errors (Gelman, Meng & Stern, Stat. Sinica 6, 733 (1996)).
     """
     series, windows = problem.series, problem.windows
     inverse = 1 / series.temperature
