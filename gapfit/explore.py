@@ -27,7 +27,10 @@ DEGREES = 6.0
 N_START = 8
 N_MODE = 3
 NEGLIGIBLE = 9.0
-ROUNDS = (600, 800, 2500)
+FIRST_DRAWS = (600, 800)
+FINAL_DRAWS = 2500
+EXTRA_ROUNDS = 3
+GOOD_PARETO_K = 0.6
 
 
 @dataclass(frozen=True)
@@ -306,31 +309,53 @@ def _first_mixture(modes: _Modes) -> Mixture:
     return Mixture(weight, mean, np.concatenate([root, 2 * root, np.eye(n_dim)[None]]))
 
 
-def _sample(posterior: LogPosterior, modes: _Modes, rng: np.random.Generator) -> Explored:
-    """Adaptive importance sampling of one combination."""
-    mixture = _first_mixture(modes)
-    for n_draw in ROUNDS[:-1]:
+@dataclass(frozen=True)
+class _Weighted:
+    """Draws of a mixture with their smoothed importance weights."""
+
+    points: FloatArray
+    log_weight: FloatArray
+    shape: float
+
+    @classmethod
+    def drawn(
+        cls, posterior: LogPosterior, mixture: Mixture, n_draw: int, rng: np.random.Generator
+    ) -> _Weighted:
         points = mixture.sample(n_draw, rng)
-        smoothed, _ = pareto_smooth(posterior(points) - mixture.log_density(points))
-        weight = np.exp(smoothed - smoothed.max())
-        weight /= weight.sum()
+        return cls(points, *pareto_smooth(posterior(points) - mixture.log_density(points)))
+
+    def refit(self, mixture: Mixture) -> Mixture:
+        weight = np.exp(self.log_weight - self.log_weight.max())
         for _ in range(3):
-            mixture = mixture.refitted(points, weight)
-    mixture = mixture.widened()
-    points = mixture.sample(ROUNDS[-1], rng)
-    smoothed, shape = pareto_smooth(posterior(points) - mixture.log_density(points))
-    log_evidence = log_mean_exp(smoothed)
-    ess = effective_weights(smoothed)
-    log_weight = smoothed - log_evidence - np.log(smoothed.size)
-    error = float(np.sqrt(max(1 / ess - 1 / smoothed.size, 0.0)))
+            mixture = mixture.refitted(self.points, weight / weight.sum())
+        return mixture
+
+
+def _sample(posterior: LogPosterior, modes: _Modes, rng: np.random.Generator) -> Explored:
+    """Adaptive importance sampling of one combination; poor weights earn further rounds."""
+    mixture = _first_mixture(modes)
+    for n_draw in FIRST_DRAWS:
+        mixture = _Weighted.drawn(posterior, mixture, n_draw, rng).refit(mixture)
+    wide = mixture.widened()
+    draws = _Weighted.drawn(posterior, wide, FINAL_DRAWS, rng)
+    for _ in range(EXTRA_ROUNDS):
+        if draws.shape < GOOD_PARETO_K:
+            break
+        mixture = draws.refit(mixture)
+        again = mixture.widened()
+        redrawn = _Weighted.drawn(posterior, again, FINAL_DRAWS, rng)
+        if redrawn.shape < draws.shape:
+            wide, draws = again, redrawn
+    log_evidence = log_mean_exp(draws.log_weight)
+    ess = effective_weights(draws.log_weight)
     return Explored(
         posterior.combination,
         log_evidence,
-        error,
-        points,
-        log_weight,
-        shape,
+        float(np.sqrt(max(1 / ess - 1 / FINAL_DRAWS, 0.0))),
+        draws.points,
+        draws.log_weight - log_evidence - np.log(FINAL_DRAWS),
+        draws.shape,
         ess,
-        mixture,
+        wide,
         modes.position,
     )
