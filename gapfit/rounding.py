@@ -1,8 +1,9 @@
-"""Numbers for the eye: values with errors, intervals and limits rounded by one rule, in text, HTML and LaTeX.
+"""Numbers for the eye: values with errors, intervals and limits rounded by one rule, as text, HTML and LaTeX.
 
-The rule is that of the Particle Data Group (Review of Particle Physics, introduction, section 5.3 "Rounding"): if the three
-highest-order digits of the error lie between 100 and 354, two digits of it are kept; between 355 and 949, one; between 950
-and 999 it is rounded up to 1000 and two are kept. The value is given to the same place. Files keep raw numbers.
+The rule is that of the Particle Data Group (Review of Particle Physics, introduction, section 5.3 "Rounding"):
+if the three highest-order digits of the error lie between 100 and 354, two digits of it are kept; between 355
+and 949, one; between 950 and 999 it is rounded up to 1000 and two are kept. The value is given to the same
+place. Files keep raw numbers.
 """
 
 from __future__ import annotations
@@ -235,8 +236,8 @@ def round_value(value: float, above: float, below: float | None = None) -> Round
     Returns
     -------
     Rounded
-        Empty if the value is NaN. The smaller error sets the place, so that neither is rounded away (common practice, no
-        source); an error of zero sets none, and a value with two of them is printed to six digits.
+        Empty if the value is NaN. The smaller error sets the place, so that neither is rounded away (common
+        practice, no source); an error of zero sets none, and a value with two of them is printed to six digits.
 
     Raises
     ------
@@ -253,8 +254,8 @@ def round_value(value: float, above: float, below: float | None = None) -> Round
     if place is None:
         return Rounded(f"{value:.6g}", "0", "0")
     power = _power_of_ten(value, above, below)
-    numbers = [_plain(_rounded(number, place), power) for number in (value, above, below)]
-    return Rounded(*numbers, power)
+    middle, upper, lower = (_plain(_rounded(number, place), power) for number in (value, above, below))
+    return Rounded(middle, upper, lower, power)
 
 
 def round_interval(low: float, high: float) -> RoundedInterval:
@@ -277,16 +278,17 @@ def round_interval(low: float, high: float) -> RoundedInterval:
     if isnan(low) or isnan(high):
         return RoundedInterval("", "")
     place, power = error_place((high - low) / 2), _power_of_ten(low, high)
-    ends = [_plain(_rounded(number, place), power) for number in (low, high)]
-    return RoundedInterval(*ends, power)
+    first, last = (_plain(_rounded(number, place), power) for number in (low, high))
+    return RoundedInterval(first, last, power)
 
 
 def round_limit(sign: str, value: float) -> RoundedLimit:
-    """One-sided limit to two digits, a lower one rounded down and an upper one up, so that it never claims more.
+    """One-sided limit to two digits, rounded so that it never claims more than the number.
 
     Parameters
     ----------
     sign : {">", "<"}
+        A lower limit is rounded down, an upper one up.
     value : float
 
     Returns

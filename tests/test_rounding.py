@@ -114,9 +114,9 @@ def test_rounding_moves_a_value_by_a_seventh_of_its_error_at_most(value: float, 
     rounded = round_value(value, error)
     printed = Decimal(rounded.value).scaleb(rounded.power)
     # one digit kept: at worst half a unit of an error of 3.55 units; two digits: half a unit of at least 9.5
-    assert abs(printed - Decimal(value)) <= Decimal(0.1409) * Decimal(error)
+    assert abs(printed - Decimal(repr(value))) <= Decimal("0.1409") * Decimal(repr(error))
     kept = Decimal(rounded.above).scaleb(rounded.power)
-    assert abs(kept - Decimal(error)) <= Decimal(0.1409) * Decimal(error)
+    assert abs(kept - Decimal(repr(error))) <= Decimal("0.1409") * Decimal(repr(error))
 
 
 @given(st.floats(1e-9, 1e9), st.integers(-3, 3))
