@@ -16,12 +16,12 @@ from numpy.typing import NDArray
 from scipy.constants import e, h
 
 from gapfit.dips import Dip, find_dips, trace_curve
-from gapfit.errors import InputError, NotEnoughData
+from gapfit.errors import InputError
 from gapfit.hall import density_from_filling, filling_factor, fractions_up_to
-from gapfit.traces import Sweep, TraceFamily
+from gapfit.traces import Sweep, TraceFamily, by_fixed_field
 from gapfit.units import VON_KLITZING_OHM
 
-__all__ = ["Anchor", "DensityEstimate", "DensityRoute", "estimate_density"]
+__all__ = ["Anchor", "DensityEstimate", "DensityRoute", "coldest_sweeps", "estimate_density"]
 
 FloatArray = NDArray[np.float64]
 
@@ -275,7 +275,9 @@ def _hall_slope_per_volt(family: TraceFamily) -> float:
         hall = np.asarray(sweep.rho_xy_ohm)
         outer = np.abs(hall) < np.quantile(np.abs(hall), 0.4)
         outer &= np.sign(hall) == np.sign(np.median(hall[outer]))
-        found.append(abs(float(np.polyfit(sweep.abscissa[outer], sweep.mean_field / (e * hall[outer]), 1)[0])))
+        found.append(
+            abs(float(np.polyfit(sweep.abscissa[outer], sweep.mean_field / (e * hall[outer]), 1)[0]))
+        )
     if not found:
         raise InputError(
             "the gate's calibration is unknown: give capacitance_F_per_m2 or density_per_volt in [traces], or name "
@@ -287,12 +289,19 @@ def _hall_slope_per_volt(family: TraceFamily) -> float:
 # --- anchors --------------------------------------------------------------------------------------------
 
 
-def _coldest(family: TraceFamily) -> list[Sweep]:
-    """Sweeps of the lowest temperatures, for every fixed field of a gate study."""
-    fields = {round(sweep.mean_field, 2) if family.kind != "field" else 0.0 for sweep in family.sweeps}
+def coldest_sweeps(family: TraceFamily) -> list[Sweep]:
+    """Sweeps of the lowest temperatures, for every fixed field of a gate study.
+
+    Parameters
+    ----------
+    family : TraceFamily
+
+    Returns
+    -------
+    list of Sweep
+    """
     found = []
-    for field in sorted(fields):
-        own = [s for s in family.sweeps if family.kind == "field" or round(s.mean_field, 2) == field]
+    for own in by_fixed_field(family.sweeps).values():
         limit = np.unique([round(s.mean_temperature, 6) for s in own])[:LOWEST_SWEEPS][-1]
         found += [sweep for sweep in own if sweep.mean_temperature <= limit * (1 + 1e-6)]
     return found
@@ -310,11 +319,11 @@ def _targets(low: float, high: float) -> FloatArray:
 
 def _scanned(family: TraceFamily, start: DensityEstimate) -> DensityEstimate:
     """Starting density of field sweeps, scaled so that the minima fall on simple fillings."""
-    dips = [dip for sweep in _coldest(family) for dip in _sweep_dips(sweep, start)]
+    dips = [dip for sweep in coldest_sweeps(family) for dip in _sweep_dips(sweep, start)]
     if len(dips) < 2:
         return start
-    places = np.array([dip.centre for dip in dips])
-    weight = np.array([dip.depth / max(abs(dip.value) + dip.depth, 1e-300) for dip in dips])
+    places = np.array([dip.place for dip in dips])
+    weight = np.array([dip.share for dip in dips])
     targets = _targets(0.1, HIGHEST_TARGET)
     simple = np.array([1 / Fraction(t).limit_denominator(9).denominator for t in targets])
     scales = np.exp(np.linspace(-SCAN, SCAN, 601))
@@ -331,7 +340,7 @@ def _sweep_dips(sweep: Sweep, estimate: DensityEstimate) -> list[Dip]:
 
 
 def _anchors(family: TraceFamily, estimate: DensityEstimate) -> list[Anchor]:
-    plateaus = [anchor for sweep in _coldest(family) for anchor in _plateaus(sweep, estimate)]
+    plateaus = [anchor for sweep in coldest_sweeps(family) for anchor in _plateaus(sweep, estimate)]
     if family.kind != "field" and len({anchor.filling for anchor in plateaus}) > 2:
         estimate = _refined(estimate, plateaus)
     minima = [anchor for sweep in family.sweeps for anchor in _minima(sweep, estimate)]
@@ -348,9 +357,7 @@ def _anchor(
     temperature = float(np.interp(place, nominal[order], sweep.temperature_K[order]))
     field = abs(abscissa) if sweep.kind == "field" else sweep.mean_field
     density = density_from_filling(filling, field)
-    spread = error * e * field / h
-    if sweep.kind == "field":
-        spread = abs(density) * error / abs(place)
+    spread = abs(density) * error / abs(place) if sweep.kind == "field" else error * e * field / h
     return Anchor(filling, kind, temperature, field, abscissa, density, spread)
 
 
@@ -359,11 +366,11 @@ def _minima(sweep: Sweep, estimate: DensityEstimate) -> list[Anchor]:
     found = []
     for dip in _sweep_dips(sweep, estimate):
         field = sweep.mean_field if sweep.kind != "field" else 0.0
-        filling = _nearest(dip.centre, 0.25 * dip.half_width, estimate, field)
+        room = (0.4 if dip.flat else 0.25) * dip.half_width
+        filling = None if dip.at_edge else _nearest(dip.place, room, estimate, field)
         if filling is not None:
-            share = dip.depth / max(dip.depth + max(dip.value, 0.0), 1e-300)
-            error = float(np.hypot(dip.centre_error, CENTRE_SHARE * dip.half_width / share))
-            found.append(_anchor("minimum", filling, sweep, estimate, dip.centre, error))
+            error = float(np.hypot(dip.place_error, CENTRE_SHARE * dip.half_width / dip.share))
+            found.append(_anchor("minimum", filling, sweep, estimate, dip.place, error))
     return found
 
 
@@ -439,7 +446,9 @@ def _plateau(
     centre = float(place[stop] + place[start]) / 2
     filling = Fraction(best).limit_denominator(9)
     spacing = float(np.abs(np.diff(place[start : stop + 1])).max())
-    return _anchor("plateau", filling, sweep, estimate, centre, float(np.hypot(PLATEAU_SHARE * half, spacing)))
+    return _anchor(
+        "plateau", filling, sweep, estimate, centre, float(np.hypot(PLATEAU_SHARE * half, spacing))
+    )
 
 
 # --- refined value --------------------------------------------------------------------------------------

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +16,8 @@ __all__ = ["Dip", "find_dips", "trace_curve"]
 FloatArray = NDArray[np.float64]
 LOG_STEP = 6e-4
 LINEAR_STEP = 6e-4
+FLAT_SHARE = 0.95
+FLAT_ERROR = 0.3
 HIGHEST_FILLING = 12.0
 """Field sweeps are searched for minima up to this filling factor."""
 
@@ -37,10 +39,12 @@ class Dip:
         Smoothed reading there.
     depth : float, ohm or S
         How far below the lower of its two shoulders it lies.
-    half_width : float
-        Half of the full width at half depth, in filling factor.
+    low, high : float
+        Filling factors on either side where the trace has risen by half of the depth.
     noise : float, ohm or S
         Standard error of the smoothed trace.
+    at_edge : bool
+        Whether the sweep ends before the trace has risen by half of the depth; that side is then the end.
     """
 
     filling: float
@@ -49,8 +53,40 @@ class Dip:
     centre_error: float
     value: float
     depth: float
-    half_width: float
+    low: float
+    high: float
     noise: float
+    at_edge: bool = False
+
+    @property
+    def half_width(self) -> float:
+        """Half of the full width at half depth, in filling factor."""
+        return (self.high - self.low) / 2
+
+    @property
+    def middle(self) -> float:
+        """Filling factor half way between the two sides."""
+        return (self.high + self.low) / 2
+
+    @property
+    def share(self) -> float:
+        """Depth relative to the lower shoulder, at most one."""
+        return self.depth / (self.depth + max(self.value, 0.0))
+
+    @property
+    def flat(self) -> bool:
+        """Whether it goes down to nearly nothing, so that its lowest point says little about its centre."""
+        return self.share > FLAT_SHARE or self.at_edge
+
+    @property
+    def place(self) -> float:
+        """Best filling factor of the centre: half way between the sides of a flat minimum."""
+        return self.middle if self.flat else self.centre
+
+    @property
+    def place_error(self) -> float:
+        """Standard error of `place`; neighbours make the sides of a flat minimum uneven."""
+        return FLAT_ERROR * self.half_width if self.flat else self.centre_error
 
 
 def trace_curve(sweep: Sweep, filling: FloatArray, values: FloatArray | None = None) -> Curve:
@@ -102,23 +138,28 @@ def find_dips(curve: Curve, logarithmic: bool, significance: float = 5.0, share:
     """
     if curve.axis.size < 5:
         return []
-    peaks, record = find_peaks(-curve.value, prominence=0.0)
+    walled = np.concatenate(([np.inf], curve.value, [np.inf]))
+    walled[[0, -1]] = np.max(curve.value) + np.ptp(curve.value)
+    peaks, record = find_peaks(-walled, prominence=0.0)
     depth = record["prominences"]
-    noise = curve.value_error[peaks]
-    shoulder = np.abs(curve.value[peaks] + depth)
+    inner = np.clip(peaks - 1, 0, curve.axis.size - 1)
+    shoulder = np.minimum(np.abs(curve.value[inner] + depth), np.abs(curve.value).max())
     level = np.maximum(shoulder, 0.2 * np.median(np.abs(curve.value)))
-    seen = (depth > significance * noise) & (depth > share * level) & (depth > 0)
+    seen = (depth > significance * curve.value_error[inner]) & (depth > share * level) & (depth > 0)
+    seen &= (inner > 1) & (inner < curve.axis.size - 2)
     if not seen.any():
         return []
     bases = tuple(part[seen] for part in (depth, record["left_bases"], record["right_bases"]))
-    peaks = peaks[seen]
-    _, _, left, right = peak_widths(-curve.value, peaks, 0.5, prominence_data=bases)
-    index = np.arange(curve.axis.size)
-    edges = np.interp(left, index, curve.axis), np.interp(right, index, curve.axis)
-    return [
+    _, _, left, right = peak_widths(-walled, peaks[seen], 0.5, prominence_data=bases)
+    index = np.arange(curve.axis.size) + 1
+    sides = np.interp(left, index, curve.axis), np.interp(right, index, curve.axis)
+    at_edge = (left < 1) | (right > curve.axis.size)
+    found = [
         _dip(curve, int(peak), float(deep), float(low), float(high), logarithmic)
-        for peak, deep, low, high in zip(peaks, bases[0], *edges, strict=True)
+        for peak, deep, low, high in zip(inner[seen], bases[0], *sides, strict=True)
     ]
+    found = [replace(dip, at_edge=bool(edge)) for dip, edge in zip(found, at_edge, strict=True)]
+    return [dip for dip in found if not dip.at_edge or dip.share > FLAT_SHARE]
 
 
 def _dip(curve: Curve, peak: int, depth: float, low: float, high: float, logarithmic: bool) -> Dip:
@@ -140,7 +181,8 @@ def _dip(curve: Curve, peak: int, depth: float, low: float, high: float, logarit
         centre_error=centre_error * scale,
         value=float(curve.value[peak]),
         depth=depth,
-        half_width=half * scale,
+        low=float(np.exp(low)) if logarithmic else low,
+        high=float(np.exp(high)) if logarithmic else high,
         noise=float(curve.value_error[peak]),
     )
 

@@ -26,6 +26,7 @@ from gapfit.errors import FileError, InputError, NotEnoughData
 from gapfit.passes import digit, gap_segments, merged, passes, plateau_edges
 from gapfit.series import HIGHEST_TEMPERATURE_K
 from gapfit.traces import (
+    SAME_FIELD,
     FromName,
     FromTable,
     Sweep,
@@ -121,7 +122,9 @@ def _read(table: Table, settings: TraceSettings, notices: list[str]) -> _Record:
             f"a {settings.sweep} sweep needs {settings.sweep} = {{ column = ... }} in [traces]; found {rule!r}"
         )
     if settings.sweep != "field" and settings.field is None:
-        raise InputError(f"a {settings.sweep} sweep needs the field: field_T = ... or field = {{ column = ... }}")
+        raise InputError(
+            f"a {settings.sweep} sweep needs the field: field_T = ... or field = {{ column = ... }}"
+        )
     for used in (settings.field, settings.gate, settings.density, settings.rho_xx, settings.rho_xy):
         notice = unit_notice(table, used) if isinstance(used, ColumnRule) else None
         notices += [notice] if notice else []
@@ -324,9 +327,7 @@ def _longitudinal(
     return sigma, "sigma_xx"
 
 
-def _resistance(
-    table: Table, rule: ColumnRule, settings: TraceSettings, current: FloatArray
-) -> FloatArray:
+def _resistance(table: Table, rule: ColumnRule, settings: TraceSettings, current: FloatArray) -> FloatArray:
     """Resistance of a column in V or ohm."""
     _refuse_magnitude(table, rule, settings)
     default = "ohm" if settings.current_A is None else "V"
@@ -455,8 +456,7 @@ class _Unit:
 def _key(sweep: Sweep) -> tuple[str, str, float]:
     """What sweeps that are joined must share: contacts, current, fixed field."""
     current = f"{abs(sweep.current_A):.2g}"
-    field = 0.0 if sweep.kind == "field" else round(sweep.mean_field, 3)
-    return sweep.contacts, current, field
+    return sweep.contacts, current, 0.0 if sweep.kind == "field" else sweep.mean_field
 
 
 def _grouped(sweeps: list[Sweep]) -> list[Sweep]:
@@ -477,7 +477,8 @@ def _grouped(sweeps: list[Sweep]) -> list[Sweep]:
 
 def _may_join(one: _Unit, two: _Unit, tolerance: float) -> bool:
     close = abs(one.temperature - two.temperature) <= tolerance * one.temperature
-    return one.key == two.key and close and one.roles.isdisjoint(two.roles)
+    alike = one.key[:2] == two.key[:2] and abs(one.key[2] - two.key[2]) <= SAME_FIELD * one.key[2]
+    return alike and close and one.roles.isdisjoint(two.roles)
 
 
 def _joined(one: _Unit, two: _Unit) -> _Unit:

@@ -303,7 +303,9 @@ def _alignment(members: Sequence[Sweep], offsets: FloatArray, leaks: Sequence[_D
         if not known.any():
             return float("nan"), float("nan")
         spread = float(np.std(values[known])) / np.sqrt(known.sum())
-        return float(values[known].mean()), float(np.hypot(np.sqrt(np.sum(errors[known] ** 2)) / known.sum(), spread))
+        return float(values[known].mean()), float(
+            np.hypot(np.sqrt(np.sum(errors[known] ** 2)) / known.sum(), spread)
+        )
 
     return Alignment(
         members[0].group,
@@ -385,7 +387,9 @@ def _alignment_notices(alignments: Sequence[Alignment], family: TraceFamily) -> 
         middle = float(np.median(values[known]))
         if abs(middle) > NOTABLE * float(np.median(errors[known])) / np.sqrt(known.sum()):
             spread = f"; from {values[known].min():.3g} to {values[known].max():.3g} over the temperatures"
-            notices.append(text.format(factor * middle) + (spread if known.sum() > 1 and factor == 1.0 else ""))
+            notices.append(
+                text.format(factor * middle) + (spread if known.sum() > 1 and factor == 1.0 else "")
+            )
     unlike = [alignment for alignment in alignments if alignment.remaining > 2 * NOTABLE]
     if unlike:
         notices.append(

@@ -6,6 +6,7 @@ A `TraceFamily` holds all sweeps of one sample in one cool-down. The functions t
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from math import log, pi
 from typing import Literal
@@ -27,6 +28,7 @@ __all__ = [
     "SweepKind",
     "TraceFamily",
     "TraceSettings",
+    "by_fixed_field",
     "conductivity",
     "conductivity_error",
     "corbino_conductivity",
@@ -38,6 +40,9 @@ BoolArray = NDArray[np.bool_]
 SweepKind = Literal["field", "density", "gate"]
 Direction = Literal["up", "down"]
 GeometryKind = Literal["hall-bar", "van-der-pauw", "corbino", "resistivity", "unknown"]
+SAME_FIELD = 0.005
+"""Fixed fields within this share are the same."""
+
 GEOMETRIES = ("hall-bar", "van-der-pauw", "corbino", "resistivity", "unknown")
 
 
@@ -423,3 +428,27 @@ class TraceFamily:
     def noted(self, *notices: str) -> TraceFamily:
         """The same family with notices added (each at most once)."""
         return replace(self, notices=tuple(dict.fromkeys(self.notices + notices)))
+
+
+def by_fixed_field(sweeps: Sequence[Sweep]) -> dict[float, list[Sweep]]:
+    """Gate and density sweeps by the field at which they were taken.
+
+    Parameters
+    ----------
+    sweeps : sequence of Sweep
+
+    Returns
+    -------
+    dict of float (T) to list of Sweep
+        Fields within half a percent are one. All field sweeps stand together under NaN.
+    """
+    if not sweeps or sweeps[0].kind == "field":
+        return {float("nan"): list(sweeps)} if sweeps else {}
+    found: dict[float, list[Sweep]] = {}
+    for sweep in sorted(sweeps, key=lambda one: one.mean_field):
+        last = next(reversed(found), None)
+        if last is not None and sweep.mean_field <= last * (1 + SAME_FIELD):
+            found[last].append(sweep)
+        else:
+            found[sweep.mean_field] = [sweep]
+    return found

@@ -1,0 +1,357 @@
+"""One reading of one trace: a local polynomial at a filling factor, with an honest standard error."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gapfit.density import DensityEstimate
+from gapfit.smoothing import (
+    LAGS,
+    Noise,
+    fit_noise,
+    noise_amplitude,
+    polynomial_operator,
+    residual_covariance,
+    variance_factor,
+)
+from gapfit.traces import Sweep
+
+__all__ = [
+    "Stretch",
+    "Value",
+    "fitted_value",
+    "mean_value",
+    "noise_of",
+    "stretch",
+    "temperature_at",
+    "usable_width",
+]
+
+FloatArray = NDArray[np.float64]
+
+WIDTHS = tuple(float(width) for width in np.geomspace(0.003, 0.04, 8))
+"""Half-widths, relative to the filling, from which that of the local polynomial is chosen."""
+
+DEGREE = 2
+LEAST_POINTS = 7
+NOISE_DEGREE = 5
+NOISE_WIDTH = 0.03
+NOISE_POINTS = (20, 100)
+DENSEST = 800
+"""Points of a stretch beyond which neighbours are averaged first."""
+
+
+@dataclass(frozen=True, eq=False)
+class Stretch:
+    """The part of a sweep about a filling factor.
+
+    Attributes
+    ----------
+    distance : ndarray[n_point]
+        Filling factor minus the one of interest, over `unit`; in the order of the sweep.
+    signal, temperature : ndarray[n_point]
+        Readings there.
+    hall : ndarray[n_point] or None
+        Hall resistivity there.
+    unit : float
+        Filling factor that a distance of one means.
+    residual : ndarray[n_near]
+        What a polynomial of fifth degree leaves of the signal near the place, for the noise.
+    step : float
+        Digit of the signal.
+    inside : bool
+        Whether the place lies between points, not beyond an end nor in a gap.
+    """
+
+    distance: FloatArray
+    signal: FloatArray
+    temperature: FloatArray
+    hall: FloatArray | None
+    unit: float
+    residual: FloatArray
+    step: float
+    inside: bool
+
+
+@dataclass(frozen=True)
+class Value:
+    """A value with its standard error and the derivatives of the trace there.
+
+    Attributes
+    ----------
+    value, error : float, ohm or S
+        The reading, and its standard error from the noise of the trace.
+    slope, curvature : float, per unit filling factor and its square
+        Derivatives of the trace.
+    one_sided : bool
+        Whether the sweep ends, or has a gap, within the window.
+    """
+
+    value: float
+    error: float
+    slope: float
+    curvature: float
+    one_sided: bool
+
+
+NOTHING = Value(float("nan"), float("nan"), float("nan"), float("nan"), True)
+
+
+def stretch(sweep: Sweep, filling: FloatArray, place: float) -> Stretch:
+    """Cut the part of a sweep about a filling factor.
+
+    Parameters
+    ----------
+    sweep : Sweep
+        The sweep.
+    filling : ndarray[n_point]
+        Filling factor along it.
+    place : float
+        Filling factor of interest.
+
+    Returns
+    -------
+    Stretch
+    """
+    unit = max(abs(place), 1 / 3)
+    distance = (filling - place) / unit
+    nearest = int(np.argmin(np.abs(distance)))
+    reach = max(WIDTHS[-1], float(np.sort(np.abs(distance))[min(NOISE_POINTS[0], distance.size - 1)]))
+    rows = np.flatnonzero((np.abs(distance) <= reach) & (sweep.segment == sweep.segment[nearest]))
+    near = distance[rows]
+    bunch = max(1, rows.size // DENSEST)
+    columns = [near, sweep.signal[rows], sweep.temperature_K[rows]]
+    columns += [] if sweep.rho_xy_ohm is None else [sweep.rho_xy_ohm[rows]]
+    columns = [_bunched(column, bunch) for column in columns]
+    return Stretch(
+        distance=columns[0],
+        signal=columns[1],
+        temperature=columns[2],
+        hall=columns[3] if len(columns) > 3 else None,
+        unit=unit,
+        residual=_residual(columns[0], columns[1]),
+        step=sweep.step,
+        inside=bool(near.size and near.min() <= 0 <= near.max()),
+    )
+
+
+def _bunched(column: FloatArray, bunch: int) -> FloatArray:
+    """Means of neighbours."""
+    if bunch == 1:
+        return column
+    size = column.size // bunch * bunch
+    return np.asarray(column[:size].reshape(-1, bunch).mean(axis=1))
+
+
+def _residual(distance: FloatArray, signal: FloatArray) -> FloatArray:
+    """What a polynomial leaves of the points nearest to the place."""
+    low, high = NOISE_POINTS
+    size = int(np.clip(np.sum(np.abs(distance) <= NOISE_WIDTH), low, high))
+    rows = np.sort(np.argsort(np.abs(distance), kind="stable")[:size])
+    if rows.size <= NOISE_DEGREE + 2:
+        return np.zeros(rows.size)
+    place = distance[rows] - distance[rows].mean()
+    basis, _ = np.linalg.qr(np.vander(place / np.abs(place).max(), NOISE_DEGREE + 1))
+    return np.asarray(signal[rows] - basis @ (basis.T @ signal[rows]))
+
+
+def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
+    """Correlation of the noise in each of some stretches, from its own residuals and its neighbours'.
+
+    Parameters
+    ----------
+    stretches : sequence of Stretch
+        In order of temperature.
+    reach : int
+        Neighbours on either side that are averaged in.
+
+    Returns
+    -------
+    list of Noise
+    """
+    covariances = np.array([residual_covariance(piece.residual) for piece in stretches])
+    sizes = np.array([piece.residual.size for piece in stretches])
+    power = covariances[:, :1]
+    normal = np.divide(covariances, power, out=np.zeros_like(covariances), where=power > 0)
+    normal *= sizes[:, None]
+    found = []
+    for index in range(len(stretches)):
+        near = slice(max(0, index - reach), index + reach + 1)
+        weight = float(sizes[near].sum())
+        mean = normal[near].sum(axis=0) / weight if weight else np.zeros(LAGS)
+        found.append(fit_noise(mean, int(np.median(sizes[near])), NOISE_DEGREE))
+    return found
+
+
+def _amplitude(piece: Stretch, noise: Noise) -> float:
+    """Standard deviation of the noise, not below that of the digit."""
+    size = piece.residual.size
+    square = float(piece.residual @ piece.residual) / max(size, 1)
+    found = noise_amplitude(square, size, NOISE_DEGREE, noise) if size > NOISE_DEGREE + 2 else 0.0
+    return max(found, piece.step / np.sqrt(12))
+
+
+def _window(piece: Stretch, width: float, place: float = 0.0) -> NDArray[np.intp]:
+    """Points within a half-width, or the nearest ones where these are too few."""
+    distance = np.abs(piece.distance - place)
+    rows = np.flatnonzero(distance <= width)
+    if rows.size < LEAST_POINTS:
+        rows = np.sort(np.argsort(distance, kind="stable")[:LEAST_POINTS])
+    return rows
+
+
+def _digit_error(piece: Stretch, amplitude: float) -> float:
+    """Error that averaging does not remove where the noise is too small to shake the digit."""
+    return piece.step / float(np.sqrt(12)) if amplitude < 0.5 * piece.step else 0.0
+
+
+def fitted_value(piece: Stretch, noise: Noise, width: float, place: float = 0.0) -> Value:
+    """Value at a place by a local parabola.
+
+    Parameters
+    ----------
+    piece : Stretch
+        The trace.
+    noise : Noise
+        Correlation of its noise.
+    width : float
+        Half-width of the window, in units of the stretch.
+    place : float
+        Where, in units of the stretch.
+
+    Returns
+    -------
+    Value
+    """
+    rows = _window(piece, width, place)
+    if rows.size < LEAST_POINTS:
+        return NOTHING
+    distance = piece.distance[rows] - place
+    scale = float(np.abs(distance).max())
+    operator = polynomial_operator(distance / scale, DEGREE)
+    value, slope, bend = operator @ piece.signal[rows]
+    amplitude = _amplitude(piece, noise)
+    error = amplitude * float(np.sqrt(variance_factor(operator[0], noise)))
+    return Value(
+        value=float(value),
+        error=float(np.hypot(error, _digit_error(piece, amplitude))),
+        slope=float(slope) / (scale * piece.unit),
+        curvature=2 * float(bend) / (scale * piece.unit) ** 2,
+        one_sided=bool(min(-distance.min(), distance.max()) < 0.5 * scale),
+    )
+
+
+def mean_value(piece: Stretch, noise: Noise, width: float) -> Value:
+    """Mean of the trace over a window about the place.
+
+    Parameters
+    ----------
+    piece : Stretch
+        The trace.
+    noise : Noise
+        Correlation of its noise.
+    width : float
+        Half-width of the window, in units of the stretch.
+
+    Returns
+    -------
+    Value
+    """
+    rows = np.flatnonzero(np.abs(piece.distance) <= width)
+    if rows.size < 2:
+        rows = np.sort(np.argsort(np.abs(piece.distance), kind="stable")[:3])
+    weights = np.full(rows.size, 1 / rows.size)
+    amplitude = _amplitude(piece, noise)
+    error = amplitude * float(np.sqrt(variance_factor(weights, noise)))
+    error = float(np.hypot(error, _digit_error(piece, amplitude)))
+    return Value(float(weights @ piece.signal[rows]), error, 0.0, 0.0, False)
+
+
+def usable_width(stretches: Sequence[Stretch], noises: Sequence[Noise]) -> float:
+    """Widest window in which parabolas agree with those of all narrower ones, over all temperatures together.
+
+    Parameters
+    ----------
+    stretches : sequence of Stretch
+        One filling at all temperatures.
+    noises : sequence of Noise
+        Correlation of the noise of each.
+
+    Returns
+    -------
+    float
+        Half-width in units of the stretches. The difference of two nested unbiased estimates has the
+        difference of their variances; the widest window that passes is used (the idea of Lepski, 1991).
+    """
+    found = [
+        [fitted_value(piece, noise, width) for piece, noise in zip(stretches, noises, strict=True)]
+        for width in WIDTHS
+    ]
+    value = np.array([[one.value for one in row] for row in found])
+    variance = np.array([[one.error**2 for one in row] for row in found])
+    best = 0
+    for wide in range(1, len(WIDTHS)):
+        excess = np.maximum(variance[:wide] - variance[wide], 0.05 * variance[:wide])
+        pull = (value[:wide] - value[wide]) ** 2 / excess
+        usual = np.mean(pull, axis=1) <= 1 + 2 * np.sqrt(2 / value.shape[1])
+        if not (usual.all() and pull.max() < LARGEST_PULL):
+            break
+        best = wide
+    return WIDTHS[best]
+
+
+LARGEST_PULL = 12.0
+
+
+def temperature_at(piece: Stretch, width: float) -> tuple[float, float]:
+    """Temperature at the place, and its error from scatter and drift over the window.
+
+    Parameters
+    ----------
+    piece : Stretch
+        The trace.
+    width : float
+        Half-width of the window.
+
+    Returns
+    -------
+    temperature, error : float, K
+        The value of a straight line at the place; scatter about it, and its rise over the window as the
+        spread of an even distribution, in quadrature.
+    """
+    rows = _window(piece, width)
+    distance, temperature = piece.distance[rows], piece.temperature[rows]
+    if np.ptp(temperature) == 0 or np.ptp(distance) == 0:
+        return float(temperature[0]), 0.0
+    slope, value = np.polyfit(distance, temperature, 1)
+    scatter = float(np.std(temperature - np.polyval([slope, value], distance)))
+    drift = abs(float(slope)) * float(np.ptp(distance)) / float(np.sqrt(12))
+    return float(value), float(np.hypot(scatter, drift))
+
+
+def displacement_error(value: Value, filling_error: float) -> float:
+    """Error of a reading from that of the filling factor: |d rho/d nu| sigma, and its curvature.
+
+    Parameters
+    ----------
+    value : Value
+        The reading.
+    filling_error : float
+        Standard error of the filling factor there.
+
+    Returns
+    -------
+    float, ohm or S
+    """
+    linear = value.slope * filling_error
+    square = value.curvature * filling_error**2 / np.sqrt(2)
+    return float(np.hypot(linear, square))
+
+
+def filling_error_at(density: DensityEstimate, sweep: Sweep, place: float) -> float:
+    """Standard error of the filling factor at a place of a sweep."""
+    return density.filling_error(place, sweep.mean_field)
