@@ -102,7 +102,7 @@ def _read_carefully(
 
 
 def _last_filled(lines: Sequence[str]) -> int:
-    return max((i for i in range(len(lines) - 1, -1, -1) if lines[i].strip()), default=-1)
+    return next((i for i in range(len(lines) - 1, -1, -1) if lines[i].strip()), -1)
 
 
 def _is_heading(line: str, layout: Layout) -> bool:

@@ -10,6 +10,7 @@ import csv
 import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from itertools import islice
 from pathlib import Path
 
 import numpy as np
@@ -19,7 +20,7 @@ from gapfit.errors import FileError
 
 __all__ = ["COMMENT", "MISSING", "Dialect", "Layout", "decode", "find_heading", "find_layout", "name_columns"]
 
-_SAMPLE = 600
+_SAMPLE = 80
 _HEADING_REACH = 12
 _POINT = re.compile(r"[+\-−]?(?:\d+\.?\d*|\.\d+)(?:[eEdD][+\-−]?\d+)?")
 _COMMA = re.compile(r"[+\-−]?\d+(?:,\d+)?(?:[eEdD][+\-−]?\d+)?")
@@ -197,9 +198,9 @@ def _trimmed(cells: list[str]) -> list[str]:
 
 def find_layout(lines: Sequence[str], source: Path) -> Layout:
     """Dialect and columns of the lines that look most like rows of numbers."""
-    filled = [line for line in lines[: 4 * _SAMPLE] if line.strip()]
-    picks = np.unique(np.linspace(0, len(lines) - 1, _SAMPLE).astype(int))
-    sample = filled[:_SAMPLE] + [lines[i] for i in picks if i >= 4 * _SAMPLE and lines[i].strip()]
+    spread = np.unique(np.linspace(0, len(lines) - 1, _SAMPLE).astype(int)).tolist()
+    head = list(islice((i for i, line in enumerate(lines) if line.strip()), _SAMPLE))
+    sample = [lines[i] for i in sorted({*head, *spread}) if lines[i].strip()]
     best: tuple[float, int, Dialect] | None = None
     for dialect in _DIALECTS:
         rows = [dialect.split(line) for line in sample if not dialect.is_comment(line)]
