@@ -1,165 +1,40 @@
 """Carrier density by several routes side by side, and refined on plateau centres and minima.
 
-The density along a sweep is offset + slope * abscissa: a constant for a field sweep, the gate's calibration
-for a gate sweep. A place on a sweep whose filling factor nu is known, at field B, has the density nu e B / h;
-such anchors refine the starting value.
+A place on a sweep whose filling factor nu is known, at field B, has the density nu e B / h; such anchors
+refine the starting value.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from fractions import Fraction
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.constants import e, h
 
-from gapfit.dips import Dip, find_dips, trace_curve
+from gapfit.anchors import coldest_sweeps, minimum_anchors, plateau_anchors, strong_fillings, sweep_dips
+from gapfit.calibration import Anchor, DensityEstimate, DensityRoute
+from gapfit.dips import trace_curve
 from gapfit.errors import InputError
-from gapfit.hall import density_from_filling, filling_factor, fractions_up_to
-from gapfit.traces import Sweep, TraceFamily, by_fixed_field
-from gapfit.units import VON_KLITZING_OHM
+from gapfit.traces import Sweep, TraceFamily
 
-__all__ = ["Anchor", "DensityEstimate", "DensityRoute", "coldest_sweeps", "estimate_density"]
+__all__ = ["DensityEstimate", "estimate_density"]
 
 FloatArray = NDArray[np.float64]
 
-LOWEST_SWEEPS = 4
-"""Temperatures whose plateaus are used and whose minima identify the fillings."""
-
-CENTRE_SHARE = 0.04
-PLATEAU_SHARE = 0.3
-"""A deep minimum or a plateau may be off its exact filling by this share of its half-width (own choice);
-plateaus more so, since a neighbouring state cuts them off on one side."""
-
 OUTLIER = 4.0
+HIGHEST_TARGET = 6.0
 SCAN = 0.06
 SCAN_WIDTH = 0.003
+"""Starting densities of field sweeps are scaled within the first so that minima fall on fillings within the
+second, both relative."""
+
 HALL_FILLING = 12.0
 """The Hall slope is taken at fields below that of this filling factor."""
 
 LEAST_HALL_POINTS = 8
-HIGHEST_TARGET = 6.0
-PLATEAU_TOLERANCE = 0.015
-"""A plateau may be off its value by this share (current or gain)."""
-
-
-@dataclass(frozen=True)
-class Anchor:
-    """A place on a sweep whose filling factor is known.
-
-    Attributes
-    ----------
-    filling : Fraction
-    kind : {"plateau", "minimum"}
-        What was recognised.
-    temperature_K, field_T : float
-        Temperature and absolute field there.
-    abscissa : float, T, V or m^-2
-        Where it lies on the sweep.
-    density, error : float, m^-2
-        nu e B / h and its standard error; for gate sweeps the error of the place, as density.
-    """
-
-    filling: Fraction
-    kind: str
-    temperature_K: float
-    field_T: float
-    abscissa: float
-    density: float
-    error: float
-
-
-@dataclass(frozen=True)
-class DensityRoute:
-    """One way to the density (or, for gate sweeps, to the density per volt).
-
-    Attributes
-    ----------
-    name : str
-        ``"Hall slope"``, ``"plateau centres"``, ``"minima"``, ``"stated"``.
-    value, error : float, m^-2 or m^-2 per volt
-    n_used : int
-        Sweeps or anchors that it rests on.
-    """
-
-    name: str
-    value: float
-    error: float
-    n_used: int
-
-
-@dataclass(frozen=True)
-class DensityEstimate:
-    """Density along the sweeps of a family: offset + slope * abscissa.
-
-    Attributes
-    ----------
-    kind : {"field", "density", "gate"}
-        What is swept.
-    offset, slope : float, m^-2 and m^-2 per unit of the abscissa
-        A field sweep has slope zero.
-    covariance : tuple of float
-        Variance of the offset, covariance, variance of the slope.
-    routes : tuple of DensityRoute
-        All ways side by side.
-    anchors : tuple of Anchor
-        What the refined value rests on.
-    stated : float, m^-2 (or per volt)
-        The value given by the user, NaN if none.
-    notices : tuple of str
-        What the user must know.
-    """
-
-    kind: str
-    offset: float
-    slope: float
-    covariance: tuple[float, float, float] = (0.0, 0.0, 0.0)
-    routes: tuple[DensityRoute, ...] = ()
-    anchors: tuple[Anchor, ...] = ()
-    stated: float = float("nan")
-    notices: tuple[str, ...] = ()
-
-    @property
-    def density_per_m2(self) -> float:
-        """Density of a field sweep; NaN for other sweeps."""
-        return self.offset if self.kind == "field" else float("nan")
-
-    @property
-    def error_per_m2(self) -> float:
-        """Standard error of the density of a field sweep; NaN for other sweeps."""
-        return float(np.sqrt(self.covariance[0])) if self.kind == "field" else float("nan")
-
-    @property
-    def neutrality(self) -> float:
-        """Abscissa of zero density; NaN for field sweeps."""
-        return -self.offset / self.slope if self.slope else float("nan")
-
-    @property
-    def spread(self) -> float:
-        """Largest relative difference between two measured routes; NaN for fewer than two."""
-        values = [route.value for route in self.routes if route.name != "stated"]
-        return (max(values) - min(values)) / abs(np.mean(values)) if len(values) > 1 else float("nan")
-
-    def density(self, sweep: Sweep) -> FloatArray:
-        """Density along a sweep, m^-2."""
-        if self.kind == "field":
-            return np.full(sweep.n_point, self.offset)
-        return self.offset + self.slope * sweep.abscissa
-
-    def filling(self, sweep: Sweep) -> FloatArray:
-        """Filling factor along a sweep."""
-        return filling_factor(self.density(sweep), np.abs(sweep.field_T))
-
-    def filling_error(self, filling: float, field_T: float) -> float:
-        """Standard error of the filling factor from the density's, at a place of a given filling."""
-        density = density_from_filling(filling, field_T)
-        if self.kind == "field":
-            return abs(filling) * self.error_per_m2 / abs(self.offset)
-        place = (density - self.offset) / self.slope
-        variance = self.covariance[0] + 2 * place * self.covariance[1] + place**2 * self.covariance[2]
-        return float(np.sqrt(max(variance, 0.0))) * h / (e * field_T)
 
 
 def estimate_density(family: TraceFamily, stated: float | None = None) -> DensityEstimate:
@@ -257,7 +132,7 @@ def _gate_start(family: TraceFamily) -> DensityEstimate:
 
 
 def _hall_neutrality(sweep: Sweep) -> float:
-    """Abscissa between the extremes of the Hall resistance, where it changes sign; NaN-free by construction."""
+    """Abscissa between the extremes of the Hall resistance, where it changes sign."""
     hall = np.asarray(sweep.rho_xy_ohm)
     curve = trace_curve(sweep, sweep.abscissa / np.ptp(sweep.abscissa), hall)
     ends = sorted((int(np.argmax(curve.value)), int(np.argmin(curve.value))))
@@ -280,51 +155,20 @@ def _hall_slope_per_volt(family: TraceFamily) -> float:
         )
     if not found:
         raise InputError(
-            "the gate's calibration is unknown: give capacitance_F_per_m2 or density_per_volt in [traces], or name "
-            "the Hall column rho_xy"
+            "the gate's calibration is unknown: give capacitance_F_per_m2 or density_per_volt in [traces], "
+            "or name the Hall column rho_xy"
         )
     return float(np.median(found))
 
 
-# --- anchors --------------------------------------------------------------------------------------------
-
-
-def coldest_sweeps(family: TraceFamily) -> list[Sweep]:
-    """Sweeps of the lowest temperatures, for every fixed field of a gate study.
-
-    Parameters
-    ----------
-    family : TraceFamily
-
-    Returns
-    -------
-    list of Sweep
-    """
-    found = []
-    for own in by_fixed_field(family.sweeps).values():
-        limit = np.unique([round(s.mean_temperature, 6) for s in own])[:LOWEST_SWEEPS][-1]
-        found += [sweep for sweep in own if sweep.mean_temperature <= limit * (1 + 1e-6)]
-    return found
-
-
-def _targets(low: float, high: float) -> FloatArray:
-    """Filling factors that strong states have: sevenths below one, thirds and fifths below two, integers."""
-    reach = min(max(abs(low), abs(high)), HIGHEST_TARGET)
-    fractions = fractions_up_to(7, max(low, -reach), min(high, reach))
-    largest = {0: 7, 1: 5}
-    return np.array(
-        [float(f) for f in fractions if f.denominator != 2 and f.denominator <= largest.get(int(abs(f)), 1)]
-    )
-
-
 def _scanned(family: TraceFamily, start: DensityEstimate) -> DensityEstimate:
     """Starting density of field sweeps, scaled so that the minima fall on simple fillings."""
-    dips = [dip for sweep in coldest_sweeps(family) for dip in _sweep_dips(sweep, start)]
+    dips = [dip for sweep in coldest_sweeps(family) for dip in sweep_dips(sweep, start)]
     if len(dips) < 2:
         return start
     places = np.array([dip.place for dip in dips])
     weight = np.array([dip.share for dip in dips])
-    targets = _targets(0.1, HIGHEST_TARGET)
+    targets = strong_fillings(0.1, HIGHEST_TARGET)
     simple = np.array([1 / Fraction(t).limit_denominator(9).denominator for t in targets])
     scales = np.exp(np.linspace(-SCAN, SCAN, 601))
     distance = np.log(places[None, :, None] * scales[:, None, None] / targets)
@@ -335,120 +179,12 @@ def _scanned(family: TraceFamily, start: DensityEstimate) -> DensityEstimate:
     return replace(start, offset=value, covariance=((0.004 * value) ** 2, 0.0, 0.0))
 
 
-def _sweep_dips(sweep: Sweep, estimate: DensityEstimate) -> list[Dip]:
-    return find_dips(trace_curve(sweep, estimate.filling(sweep)), sweep.kind == "field", 8.0, 0.05)
-
-
 def _anchors(family: TraceFamily, estimate: DensityEstimate) -> list[Anchor]:
-    plateaus = [anchor for sweep in coldest_sweeps(family) for anchor in _plateaus(sweep, estimate)]
+    plateaus = [anchor for sweep in coldest_sweeps(family) for anchor in plateau_anchors(sweep, estimate)]
     if family.kind != "field" and len({anchor.filling for anchor in plateaus}) > 2:
         estimate = _refined(estimate, plateaus)
-    minima = [anchor for sweep in family.sweeps for anchor in _minima(sweep, estimate)]
+    minima = [anchor for sweep in family.sweeps for anchor in minimum_anchors(sweep, estimate)]
     return plateaus + minima
-
-
-def _anchor(
-    kind: str, filling: Fraction, sweep: Sweep, estimate: DensityEstimate, place: float, error: float
-) -> Anchor:
-    """Anchor at a nominal filling factor, with the error of the place given in filling factor."""
-    nominal = estimate.filling(sweep)
-    order = np.argsort(nominal)
-    abscissa = float(np.interp(place, nominal[order], sweep.abscissa[order]))
-    temperature = float(np.interp(place, nominal[order], sweep.temperature_K[order]))
-    field = abs(abscissa) if sweep.kind == "field" else sweep.mean_field
-    density = density_from_filling(filling, field)
-    spread = abs(density) * error / abs(place) if sweep.kind == "field" else error * e * field / h
-    return Anchor(filling, kind, temperature, field, abscissa, density, spread)
-
-
-def _minima(sweep: Sweep, estimate: DensityEstimate) -> list[Anchor]:
-    """Minima of a sweep that lie on simple fillings."""
-    found = []
-    for dip in _sweep_dips(sweep, estimate):
-        field = sweep.mean_field if sweep.kind != "field" else 0.0
-        room = (0.4 if dip.flat else 0.25) * dip.half_width
-        filling = None if dip.at_edge else _nearest(dip.place, room, estimate, field)
-        if filling is not None:
-            error = float(np.hypot(dip.place_error, CENTRE_SHARE * dip.half_width / dip.share))
-            found.append(_anchor("minimum", filling, sweep, estimate, dip.place, error))
-    return found
-
-
-def _nearest(place: float, room: float, estimate: DensityEstimate, field_T: float) -> Fraction | None:
-    """Simple filling next to a nominal one, or None where none or two are near."""
-    targets = _targets(place - 0.5, place + 0.5)
-    distance = np.abs(targets - place)
-    if targets.size == 0:
-        return None
-    best = int(np.argmin(distance))
-    others = np.abs(np.delete(targets, best) - targets[best])
-    sigma = estimate.filling_error(float(targets[best]), field_T or 1.0)
-    limit = min(room + 3 * sigma + 0.002 * abs(place), 0.4 * float(others.min(initial=np.inf)))
-    return Fraction(targets[best]).limit_denominator(9) if distance[best] < limit else None
-
-
-def _plateaus(sweep: Sweep, estimate: DensityEstimate) -> list[Anchor]:
-    """Plateaus of a sweep: where the Hall filling h / (e^2 R_xy) stays behind the nominal filling factor."""
-    if sweep.rho_xy_ohm is None:
-        return []
-    nominal = estimate.filling(sweep)
-    inside = (np.abs(nominal) > 0.25) & (np.abs(nominal) < HIGHEST_TARGET)
-    hall = np.where(inside, np.asarray(sweep.rho_xy_ohm), np.nan)
-    with np.errstate(divide="ignore"):
-        level = VON_KLITZING_OHM / hall
-    upright = np.sign(np.nanmedian(level * nominal))
-    anchors = []
-    for part in (inside & (nominal > 0), inside & (nominal < 0)):
-        if part.sum() >= 20:
-            anchors += _plateaus_of_part(sweep, estimate, part, np.asarray(upright * level))
-    return anchors
-
-
-def _plateaus_of_part(
-    sweep: Sweep, estimate: DensityEstimate, part: NDArray[np.bool_], level: FloatArray
-) -> list[Anchor]:
-    """Plateaus on one side of neutrality."""
-    nominal = estimate.filling(sweep)[part]
-    piece = _masked(sweep, part)
-    curve = trace_curve(piece, nominal, level[part])
-    if curve.axis.size < 5:
-        return []
-    place = np.exp(curve.axis) if sweep.kind == "field" else curve.axis
-    pace = curve.slope / place if sweep.kind == "field" else curve.slope
-    flat = (pace < 0.5) & np.isfinite(pace)
-    found = []
-    change = np.diff(np.concatenate(([False], flat, [False])).astype(np.int8))
-    for start, stop in zip(np.flatnonzero(change == 1), np.flatnonzero(change == -1), strict=True):
-        anchor = _plateau(sweep, estimate, place, curve.value, pace, int(start), int(stop) - 1)
-        found += [anchor] if anchor is not None else []
-    return found
-
-
-def _masked(sweep: Sweep, keep: NDArray[np.bool_]) -> Sweep:
-    """The sweep with some points only."""
-    cut = {n: v[keep] for n, v in vars(sweep).items() if isinstance(v, np.ndarray)}
-    return replace(sweep, **cut)
-
-
-def _plateau(
-    sweep: Sweep, estimate: DensityEstimate, place: FloatArray, level: FloatArray, pace: FloatArray,
-    start: int, stop: int,
-) -> Anchor | None:  # fmt: skip
-    """Plateau between two places, if it is wide, flat and at a known value."""
-    if start == 0 or stop == place.size - 1 or stop - start < 4 or pace[start : stop + 1].min() > 0.25:
-        return None
-    height = float(np.median(level[start : stop + 1]))
-    targets = _targets(height - 0.5, height + 0.5)
-    best = targets[int(np.argmin(np.abs(targets - height)))] if targets.size else np.inf
-    half = (place[stop] - place[start]) / 2
-    if not abs(best / height - 1) < PLATEAU_TOLERANCE or not half > 2 * PLATEAU_TOLERANCE * abs(best):
-        return None
-    centre = float(place[stop] + place[start]) / 2
-    filling = Fraction(best).limit_denominator(9)
-    spacing = float(np.abs(np.diff(place[start : stop + 1])).max())
-    return _anchor(
-        "plateau", filling, sweep, estimate, centre, float(np.hypot(PLATEAU_SHARE * half, spacing))
-    )
 
 
 # --- refined value --------------------------------------------------------------------------------------
@@ -531,7 +267,7 @@ def _notices(estimate: DensityEstimate, family: TraceFamily) -> tuple[str, ...]:
             text += f", {100 * (estimate.offset / estimate.stated - 1):+.2f} % from the stated one"
         notices.append(text)
     else:
-        text = f"density zero at {estimate.neutrality:.5g}, slope {estimate.slope:.5g} m^-2 per unit of the sweep"
+        text = f"density zero at {estimate.neutrality:.5g}, slope {estimate.slope:.5g} m^-2 per unit"
         if np.isfinite(estimate.stated):
             text += f", {100 * (estimate.slope / estimate.stated - 1):+.2f} % from the stated one"
         notices.append(text)

@@ -8,7 +8,8 @@ from fractions import Fraction
 
 import numpy as np
 
-from gapfit.density import DensityEstimate, coldest_sweeps
+from gapfit.anchors import coldest_sweeps
+from gapfit.calibration import DensityEstimate
 from gapfit.dips import Dip, find_dips, trace_curve
 from gapfit.errors import InputError, NotEnoughData
 from gapfit.hall import filling_label, fractions_up_to, parse_filling
@@ -96,8 +97,8 @@ def find_fillings(
     unnamed = _repeated(nameless)
     if not fillings:
         raise NotEnoughData(
-            f"no minimum of a filling with denominator up to {max_denominator} was found at two low temperatures; name "
-            'the fillings in the study, such as look_for = ["1/3", "2/3"]'
+            f"no minimum of a filling with denominator up to {max_denominator} was found at two low "
+            'temperatures; name the fillings in the study, such as look_for = ["1/3", "2/3"]'
         )
     return FoundFillings(fillings, unnamed, _found_notices(fillings, seen, unnamed))
 
@@ -160,7 +161,8 @@ def _found_notices(
     left_out = [filling_label(name) for name in seen if name not in fillings]
     if left_out:
         notices.append(
-            f"a broad minimum at {', '.join(left_out)} is left out as one without a gap; name it in look_for to fit it"
+            f"a broad minimum at {', '.join(left_out)} is left out as one without a gap; name it in look_for "
+            "to fit it"
         )
     if unnamed:
         notices.append("minima without a name: nu = " + ", ".join(f"{place:.4g}" for place in unnamed))

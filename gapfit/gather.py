@@ -15,18 +15,20 @@ from gapfit.hall import plateau_resistance
 from gapfit.series import ExcludedPoint, Quantity, ReadingKind, TemperatureSeries, make_series
 from gapfit.traces import Sweep, TraceFamily, conductivity, conductivity_error
 
-__all__ = ["Minimum", "ReadingSettings", "gathered_series"]
+__all__ = ["Minimum", "ReadingSettings", "chosen_quantity", "gathered_series"]
 
 FloatArray = NDArray[np.float64]
 
 SIGMA_RATIO = 0.2
-"""sigma_xx is fitted once rho_xx exceeds this share of rho_xy (common practice: Arrhenius plots part there)."""
+"""sigma_xx is fitted once rho_xx exceeds this share of rho_xy: there the Arrhenius plots part (common
+practice, no source)."""
 
 SAME_TEMPERATURE = 0.02
 """Readings of one group are joined where their temperatures agree to this share."""
 
-MATTERS_SIGMA, MATTERS_SHARE = 3.0, 0.25
-"""Another kind of reading matters where this share of the points differs by this many standard errors."""
+MATTERS_SIGMA, MATTERS_RELATIVE, MATTERS_SHARE = 3.0, 0.02, 0.25
+"""Another kind of reading matters where it differs by so many standard errors, and by this part of the
+reading, at this share of the points."""
 
 
 @dataclass(frozen=True)
@@ -162,7 +164,8 @@ def gathered_series(
     points = _joined_directions(usable, settings.reading)
     hall = abs(plateau_resistance(place or filling))
     rho_xy = np.where(np.isfinite(points.rho_xy), points.rho_xy, hall)
-    quantity = _quantity(points.value, rho_xy, sweep, settings)
+    quantity = "sigma_xx" if sweep.quantity == "sigma_xx" else None
+    quantity = quantity or chosen_quantity(points.value, rho_xy, settings.quantity)
     value, error = points.value, points.error
     if quantity == "sigma_xx" and sweep.quantity == "rho_xx":
         value, error = conductivity(value, rho_xy), conductivity_error(value, rho_xy, error)
@@ -260,13 +263,25 @@ def _temperature_slope(minima: Sequence[Minimum], reading: ReadingKind) -> tuple
     return temperature, np.gradient(means[first, 1], temperature)
 
 
-def _quantity(value: FloatArray, rho_xy: FloatArray, sweep: Sweep, settings: ReadingSettings) -> Quantity:
-    """Quantity of a whole series."""
-    if sweep.quantity == "sigma_xx":
-        return "sigma_xx"
-    if settings.quantity == "auto":
-        return "sigma_xx" if bool(np.any(np.abs(value) > SIGMA_RATIO * rho_xy)) else "rho_xx"
-    return settings.quantity
+def chosen_quantity(
+    rho_xx: FloatArray, rho_xy: FloatArray, wanted: Literal["auto", "rho_xx", "sigma_xx"]
+) -> Quantity:
+    """Quantity in which a whole series of resistivities is fitted.
+
+    Parameters
+    ----------
+    rho_xx, rho_xy : ndarray[n_point], ohm
+        Readings of the series.
+    wanted : {"auto", "rho_xx", "sigma_xx"}
+        ``"auto"``: sigma_xx once rho_xx exceeds 0.2 rho_xy at any reading.
+
+    Returns
+    -------
+    {"rho_xx", "sigma_xx"}
+    """
+    if wanted == "auto":
+        return "sigma_xx" if bool(np.any(np.abs(rho_xx) > SIGMA_RATIO * rho_xy)) else "rho_xx"
+    return wanted
 
 
 def _flags(minima: Sequence[Minimum], reading: ReadingKind) -> tuple[str, ...]:
@@ -285,7 +300,7 @@ def _matters(minima: Sequence[Minimum], reading: ReadingKind) -> bool:
     own = np.array([_chosen(one, reading) for one in minima])
     for kind in ("exact", "minimum", "mean"):
         other = np.array([_chosen(one, kind) for one in minima])
-        limit = MATTERS_SIGMA * np.fmax(own[:, 1], other[:, 1])
+        limit = np.fmax(MATTERS_SIGMA * np.fmax(own[:, 1], other[:, 1]), MATTERS_RELATIVE * np.abs(own[:, 0]))
         beyond = np.abs(own[:, 0] - other[:, 0]) > limit
         if np.sum(beyond) >= max(2, MATTERS_SHARE * len(minima)):
             return True

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
 from pathlib import PurePath
 from typing import Literal
 
@@ -22,11 +21,10 @@ from gapfit.columns import (
     unit_notice,
     units_of,
 )
+from gapfit.cutting import LEAST_ROWS, Record, cut_record, grouped
 from gapfit.errors import FileError, InputError, NotEnoughData
-from gapfit.passes import digit, gap_segments, merged, passes, plateau_edges
 from gapfit.series import HIGHEST_TEMPERATURE_K
 from gapfit.traces import (
-    SAME_FIELD,
     FromName,
     FromTable,
     Sweep,
@@ -38,31 +36,6 @@ from gapfit.traces import (
 __all__ = ["file_temperatures", "load_sweeps"]
 
 FloatArray = NDArray[np.float64]
-LEAST_ROWS = 12
-TEMPERATURE_STEP = 0.04
-FIXED_STEP = 0.01
-CURRENT_STEP = 0.05
-SAME_TEMPERATURE = 0.03
-SAME_TEMPERATURE_ACROSS_FILES = 0.01
-
-
-@dataclass(frozen=True, eq=False)
-class _Record:
-    """The columns of one file in house units, before it is cut into sweeps."""
-
-    table: Table
-    abscissa: FloatArray
-    field_T: FloatArray
-    gate_V: FloatArray
-    density: FloatArray
-    temperature: FloatArray
-    signal: FloatArray
-    quantity: Literal["rho_xx", "sigma_xx"]
-    hall: FloatArray | None
-    quadrature: FloatArray | None
-    current: FloatArray
-    contacts: NDArray[np.str_]
-    column: str | int
 
 
 def load_sweeps(tables: Sequence[Table], settings: TraceSettings) -> TraceFamily:
@@ -94,19 +67,19 @@ def load_sweeps(tables: Sequence[Table], settings: TraceSettings) -> TraceFamily
     sweeps: list[Sweep] = []
     for table in tables:
         record = _read(table, settings, notices)
-        sweeps += _cut(record, settings.sweep, notices)
+        sweeps += cut_record(record, settings.sweep, notices)
     if not sweeps:
         raise NotEnoughData(
             f"no sweep of at least {LEAST_ROWS} rows in {len(tables)} file(s); check the columns"
         )
-    sweeps = _grouped(sweeps)
+    sweeps = grouped(sweeps)
     sweeps.sort(key=lambda sweep: (sweep.mean_temperature, sweep.group))
     return TraceFamily(
         tuple(sweeps), settings.sweep, settings.geometry, settings.gate_start, tuple(dict.fromkeys(notices))
     )
 
 
-def _read(table: Table, settings: TraceSettings, notices: list[str]) -> _Record:
+def _read(table: Table, settings: TraceSettings, notices: list[str]) -> Record:
     """Columns of a file in house units, checked."""
     if len(table) == 0:
         raise FileError("the file holds no rows of numbers", file=table.source)
@@ -119,7 +92,8 @@ def _read(table: Table, settings: TraceSettings, notices: list[str]) -> _Record:
     rule, abscissa = swept.get(settings.sweep, (settings.density, density))
     if not isinstance(rule, ColumnRule):
         raise InputError(
-            f"a {settings.sweep} sweep needs {settings.sweep} = {{ column = ... }} in [traces]; found {rule!r}"
+            f"a {settings.sweep} sweep needs {settings.sweep} = {{ column = ... }} in [traces]; "
+            f"found {rule!r}"
         )
     if settings.sweep != "field" and settings.field is None:
         raise InputError(
@@ -137,9 +111,9 @@ def _read(table: Table, settings: TraceSettings, notices: list[str]) -> _Record:
         hall = _resistance(table, settings.rho_xy, settings, current)
     if settings.quadrature is not None:
         quadrature = _resistance(table, settings.quadrature, settings, current) * settings.geometry.factor
-    return _Record(
+    return Record(
         table, abscissa, field, gate, density, temperature, signal, quantity, hall, quadrature, current,
-        _contacts(table, settings), rule.column,
+        _contacts(table, settings),
     )  # fmt: skip
 
 
@@ -174,8 +148,8 @@ def _number_in_name(table: Table, rule: FromName, dimension: str) -> float:
         text = None if match is None else match["value"]
     except (re.error, IndexError) as problem:
         raise InputError(
-            f"from_name = {rule.pattern!r} cannot be used ({problem}); write a regular expression with a group "
-            "(?P<value>...)"
+            f"from_name = {rule.pattern!r} cannot be used ({problem}); write a regular expression with "
+            "a group (?P<value>...)"
         ) from problem
     if text is None:
         raise FileError(
@@ -244,7 +218,8 @@ def _number_in_table(table: Table, rule: FromTable, dimension: str) -> float:
         if PurePath(text).name in (name, table.source.stem, stem):
             return number
     raise FileError(
-        f"{name!r} is not listed there, so its {dimension} is unknown; listed are {', '.join(list(listed)[:6])}"
+        f"{name!r} is not listed there, so its {dimension} is unknown; listed are "
+        + ", ".join(list(listed)[:6])
         + (" ..." if len(listed) > 6 else ""),
         file=rule.table.source,
     )
@@ -253,8 +228,8 @@ def _number_in_table(table: Table, rule: FromTable, dimension: str) -> float:
 def _refuse_constant(table: Table, abscissa: FloatArray, rule: ColumnRule, kind: str) -> None:
     if np.ptp(abscissa) <= 1e-9 * float(np.abs(abscissa).max()):
         raise FileError(
-            f"found {abscissa[0]:g} in every row: the {kind} does not change, so this is no {kind} sweep; name the "
-            "column that is swept",
+            f"found {abscissa[0]:g} in every row: the {kind} does not change, so this is no {kind} sweep; "
+            "name the column that is swept",
             file=table.source,
             row=int(table.row[0]),
             column=rule.column,
@@ -268,8 +243,8 @@ def _temperature(table: Table, settings: TraceSettings) -> FloatArray:
     wrong = np.flatnonzero(~(temperature > 0))
     if wrong.size:
         raise FileError(
-            f"found a temperature of {temperature[wrong[0]]:g} K; temperatures must be above zero: correct or "
-            "remove the row",
+            f"found a temperature of {temperature[wrong[0]]:g} K; temperatures must be above zero: correct "
+            "or remove the row",
             file=table.source,
             row=int(table.row[wrong[0]]) if column is not None else None,
             column=column,
@@ -318,8 +293,8 @@ def _longitudinal(
     bad = np.flatnonzero(~np.isfinite(sigma))
     if bad.size:
         raise FileError(
-            f"the resistance equals lead_ohm = {shape.lead_ohm:g} ohm, which leaves an infinite conductivity; "
-            "correct lead_ohm",
+            f"the resistance equals lead_ohm = {shape.lead_ohm:g} ohm, which leaves an infinite "
+            "conductivity; correct lead_ohm",
             file=table.source,
             row=int(table.row[bad[0]]),
             column=rule.column,
@@ -337,8 +312,8 @@ def _resistance(table: Table, rule: ColumnRule, settings: TraceSettings, current
         return numbers
     if settings.current_A is None:
         raise FileError(
-            f"this column is a voltage ({unit.name}); give the excitation current, such as current_A = 1e-8, or "
-            'unit = "ohm"',
+            f"this column is a voltage ({unit.name}); give the excitation current, such as "
+            'current_A = 1e-8, or unit = "ohm"',
             file=table.source,
             column=rule.column,
         )
@@ -352,8 +327,8 @@ def _refuse_magnitude(table: Table, rule: ColumnRule, settings: TraceSettings) -
     if looks_like_magnitude(name, table.values[name], table.columns, rule.unit or table.unit(name)):
         raise FileError(
             "this looks like the magnitude of a lock-in, which is never negative: noise about zero becomes a "
-            "false resistance of 1.25 standard deviations at the minima, and gaps come out too small. Name the "
-            "in-phase channel (X), or set allow_magnitude = true in [traces] if it is none",
+            "false resistance of 1.25 standard deviations at the minima, and gaps come out too small. "
+            "Name the in-phase channel (X), or set allow_magnitude = true in [traces] if it is none",
             file=table.source,
             column=name,
         )
@@ -367,138 +342,3 @@ def _contacts(table: Table, settings: TraceSettings) -> NDArray[np.str_]:
     if name in table.texts:
         return table.texts[name]
     return np.array([f"{value:g}" for value in table.values[name]])
-
-
-def _cut(record: _Record, kind: Literal["field", "density", "gate"], notices: list[str]) -> list[Sweep]:
-    """Monotone passes of one field direction of a record."""
-    cuts = (np.flatnonzero(np.diff(record.table.block)) + 1).tolist()
-    cuts += (np.flatnonzero(record.contacts[1:] != record.contacts[:-1]) + 1).tolist()
-    cuts += plateau_edges(record.temperature, TEMPERATURE_STEP)
-    if kind != "field":
-        cuts += plateau_edges(record.field_T, FIXED_STEP)
-    if np.isfinite(record.current).all():
-        cuts += plateau_edges(record.current, CURRENT_STEP)
-    sweeps, dropped = [], 0
-    for start, stop in passes(record.abscissa, cuts):
-        for part in _by_field_sign(record, kind, np.arange(start, stop)):
-            sweep = _sweep(record, kind, part, record.abscissa[stop - 1] >= record.abscissa[start], notices)
-            sweeps += [sweep] if sweep is not None else []
-            dropped += part.size if sweep is None else 0
-    if dropped:
-        notices.append(f"{record.table.source}: {dropped} rows between sweeps are not used")
-    return sweeps
-
-
-def _by_field_sign(record: _Record, kind: str, rows: NDArray[np.int64]) -> list[NDArray[np.int64]]:
-    """Rows of positive and of negative field, zero left out."""
-    field = record.field_T[rows]
-    if kind != "field":
-        return [rows]
-    return [rows[mask] for mask in (field > 0, field < 0) if mask.any()]
-
-
-def _sweep(
-    record: _Record, kind: Literal["field", "density", "gate"], rows: NDArray[np.int64], up: bool,
-    notices: list[str],
-) -> Sweep | None:  # fmt: skip
-    """One sweep in order of rising abscissa, or None where there is too little of it."""
-    if rows.size < LEAST_ROWS or np.ptp(record.abscissa[rows]) < 0.01 * np.ptp(record.abscissa):
-        return None
-    optional = [column for column in (record.hall, record.quadrature) if column is not None]
-    names = (record.field_T, record.gate_V, record.density, record.temperature, record.signal)
-    columns = np.stack([column[rows] for column in (*names, *optional)])
-    abscissa, columns, first = merged(record.abscissa[rows], columns)
-    if abscissa.size < LEAST_ROWS:
-        return None
-    if abscissa.size < rows.size:
-        notices.append(
-            f"{record.table.source}: {rows.size - abscissa.size} points repeat another one's {kind} and were "
-            "averaged with it"
-        )
-    field, gate, density, temperature, signal = columns[:5]
-    rest = list(columns[5:])
-    hall = rest.pop(0) if record.hall is not None else None
-    current = record.current[rows]
-    return Sweep(
-        file=str(record.table.source),
-        row=record.table.row[rows][first],
-        kind=kind,
-        field_T=field,
-        gate_V=gate,
-        density_per_m2=density,
-        temperature_K=temperature,
-        signal=signal,
-        quantity=record.quantity,
-        rho_xy_ohm=hall,
-        quadrature=rest.pop(0) if rest else None,
-        direction="up" if up else "down",
-        field_sign=1 if np.median(field) > 0 else -1,
-        group=-1,
-        current_A=float(np.median(current)),
-        contacts=str(record.contacts[rows[0]]),
-        step=digit(record.signal[rows]),
-        segment=gap_segments(abscissa),
-        one_sided=np.zeros(abscissa.size, dtype=bool),
-    )
-
-
-@dataclass(frozen=True, eq=False)
-class _Unit:
-    """Sweeps that were taken together."""
-
-    key: tuple[str, str, float]
-    temperature: float
-    file: str
-    members: tuple[int, ...]
-    roles: frozenset[tuple[int, str]]
-
-
-def _key(sweep: Sweep) -> tuple[str, str, float]:
-    """What sweeps that are joined must share: contacts, current, fixed field."""
-    current = f"{abs(sweep.current_A):.2g}"
-    return sweep.contacts, current, 0.0 if sweep.kind == "field" else sweep.mean_field
-
-
-def _grouped(sweeps: list[Sweep]) -> list[Sweep]:
-    """Sweeps with their group numbers: one temperature, every field direction and sweep direction once."""
-    units: list[_Unit] = []
-    for index, sweep in enumerate(sweeps):
-        role = (sweep.field_sign, sweep.direction)
-        unit = _Unit(_key(sweep), sweep.mean_temperature, sweep.file, (index,), frozenset({role}))
-        last = units[-1] if units else None
-        if last is not None and last.file == unit.file and _may_join(last, unit, SAME_TEMPERATURE):
-            units[-1] = _joined(last, unit)
-        else:
-            units.append(unit)
-    units = _join_files(units)
-    number = {member: group for group, unit in enumerate(units) for member in unit.members}
-    return [replace(sweep, group=number[index]) for index, sweep in enumerate(sweeps)]
-
-
-def _may_join(one: _Unit, two: _Unit, tolerance: float) -> bool:
-    close = abs(one.temperature - two.temperature) <= tolerance * one.temperature
-    alike = one.key[:2] == two.key[:2] and abs(one.key[2] - two.key[2]) <= SAME_FIELD * one.key[2]
-    return alike and close and one.roles.isdisjoint(two.roles)
-
-
-def _joined(one: _Unit, two: _Unit) -> _Unit:
-    members = one.members + two.members
-    return replace(one, members=members, roles=one.roles | two.roles)
-
-
-def _join_files(units: list[_Unit]) -> list[_Unit]:
-    """Join units of different files that complete each other, the nearest temperatures first."""
-    pairs = [
-        (abs(one.temperature - two.temperature), i, i + 1 + j)
-        for i, one in enumerate(units)
-        for j, two in enumerate(units[i + 1 :])
-        if one.file != two.file and _may_join(one, two, SAME_TEMPERATURE_ACROSS_FILES)
-    ]
-    current: dict[int, _Unit] = dict(enumerate(units))
-    owner = list(range(len(units)))
-    for _, i, j in sorted(pairs):
-        left, right = owner[i], owner[j]
-        if left != right and _may_join(current[left], current[right], SAME_TEMPERATURE_ACROSS_FILES):
-            current[left] = _joined(current[left], current.pop(right))
-            owner = [left if number == right else number for number in owner]
-    return list(current.values())

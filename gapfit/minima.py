@@ -9,7 +9,7 @@ from fractions import Fraction
 import numpy as np
 from numpy.typing import NDArray
 
-from gapfit.density import DensityEstimate
+from gapfit.calibration import DensityEstimate
 from gapfit.dips import Dip, find_dips, trace_curve
 from gapfit.errors import InputError, NotEnoughData
 from gapfit.gather import Minimum, ReadingSettings, gathered_series
@@ -17,6 +17,7 @@ from gapfit.hall import density_from_filling, field_at_filling
 from gapfit.readings import (
     NOTHING,
     Stretch,
+    Value,
     displacement_error,
     filling_error_at,
     fitted_value,
@@ -33,6 +34,7 @@ from gapfit.traces import SAME_FIELD, Sweep, TraceFamily, by_fixed_field
 __all__ = ["MinimaSet", "Minimum", "ReadingSettings", "read_minima", "readings_across"]
 
 FloatArray = NDArray[np.float64]
+LARGEST_STEPS = 8
 
 
 @dataclass(frozen=True)
@@ -177,8 +179,8 @@ def _read_filling(
 
 
 def _minimum(
-    sweep: Sweep, density: DensityEstimate, where: tuple[Fraction, float], piece: Stretch, noise: Noise, width: float,
-    dips: Sequence[Dip], settings: ReadingSettings,
+    sweep: Sweep, density: DensityEstimate, where: tuple[Fraction, float], piece: Stretch, noise: Noise,
+    width: float, dips: Sequence[Dip], settings: ReadingSettings,
 ) -> Minimum:  # fmt: skip
     """The three readings of one filling on one sweep."""
     filling, place = where
@@ -186,11 +188,7 @@ def _minimum(
     exact = fitted_value(piece, noise, width)
     mean = mean_value(piece, noise, settings.window)
     dip = _own_dip(dips, place, sigma)
-    lowest = NOTHING
-    if dip is not None:
-        offset = (dip.filling - place) / piece.unit
-        within = piece.distance.min() <= offset <= piece.distance.max()
-        lowest = fitted_value(piece, noise, width, offset) if within else NOTHING
+    lowest, lowest_place = _lowest(piece, noise, width, dip, place)
     temperature, temperature_error = temperature_at(piece, width)
     floor = settings.relative_reading_error
     abscissa = _abscissa(sweep, density, place)
@@ -208,7 +206,7 @@ def _minimum(
         exact_error=float(np.sqrt(exact.error**2 + shift**2 + (floor * exact.value) ** 2)),
         minimum=lowest.value,
         minimum_error=float(np.hypot(lowest.error, floor * lowest.value)),
-        minimum_filling=float("nan") if dip is None else dip.filling,
+        minimum_filling=lowest_place,
         mean=mean.value,
         mean_error=float(np.sqrt(mean.error**2 + shift**2 + (floor * mean.value) ** 2)),
         half_width=float("nan") if dip is None else dip.half_width,
@@ -217,6 +215,26 @@ def _minimum(
         at_edge=exact.one_sided,
         one_direction=bool(sweep.one_sided[nearest]) or sweep.field_sign != 0,
     )
+
+
+def _lowest(piece: Stretch, noise: Noise, width: float, dip: Dip | None, place: float) -> tuple[Value, float]:
+    """Local minimum next to the exact filling, and its filling factor; NaN where there is none.
+
+    Steps to the vertex of the local parabola until it stays, no further than the sides of the minimum.
+    """
+    if dip is None:
+        return NOTHING, float("nan")
+    sides = (dip.low - place) / piece.unit, (dip.high - place) / piece.unit
+    where, found = 0.0, NOTHING
+    for _ in range(LARGEST_STEPS):
+        found = fitted_value(piece, noise, width, where)
+        step = found.slope / (found.curvature * piece.unit) if found.curvature > 0 else np.inf
+        if abs(step) < 0.05 * width:
+            return found, place + where * piece.unit
+        where -= float(np.clip(step, -width, width)) if np.isfinite(step) else np.sign(found.slope) * width
+        if not sides[0] <= where <= sides[1]:
+            return NOTHING, float("nan")
+    return found, place + where * piece.unit
 
 
 def _own_dip(dips: Sequence[Dip], place: float, sigma: float) -> Dip | None:

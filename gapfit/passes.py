@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -70,7 +72,7 @@ def plateau_edges(level: FloatArray, relative: float, reach: int = 5) -> list[in
     if level.size < 2 * reach:
         return []
     windows = np.median(np.lib.stride_tricks.sliding_window_view(level, reach), axis=1)
-    before, after = windows[: -reach - 0 or None], windows[reach:]
+    before, after = windows[:-reach], windows[reach:]
     size = min(before.size, after.size)
     before, after = before[:size], after[:size]
     jump = np.abs(after - before) / np.maximum(np.maximum(np.abs(after), np.abs(before)), 1e-300)
@@ -109,7 +111,7 @@ def passes(abscissa: FloatArray, cuts: list[int]) -> list[tuple[int, int]]:
     threshold = LEAST_TURN * float(np.ptp(abscissa))
     bounds = sorted({0, len(abscissa), *cuts})
     found: list[tuple[int, int]] = []
-    for start, stop in zip(bounds[:-1], bounds[1:], strict=True):
+    for start, stop in pairwise(bounds):
         piece = abscissa[start:stop]
         if np.ptp(piece) <= threshold or threshold == 0:
             found.append((start, stop))

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from gapfit.density import DensityEstimate
+from gapfit.calibration import DensityEstimate
 from gapfit.smoothing import (
-    LAGS,
     Noise,
     fit_noise,
     noise_amplitude,
@@ -38,9 +37,10 @@ WIDTHS = tuple(float(width) for width in np.geomspace(0.003, 0.04, 8))
 
 DEGREE = 2
 LEAST_POINTS = 7
-NOISE_DEGREE = 5
-NOISE_WIDTH = 0.03
-NOISE_POINTS = (20, 100)
+NOISE_WIDTH = 0.006
+NOISE_POINTS = (10, 100)
+"""The noise is taken from points within this relative half-width, but from so many at least and at most."""
+
 DENSEST = 800
 """Points of a stretch beyond which neighbours are averaged first."""
 
@@ -60,7 +60,7 @@ class Stretch:
     unit : float
         Filling factor that a distance of one means.
     residual : ndarray[n_near]
-        What a polynomial of fifth degree leaves of the signal near the place, for the noise.
+        What a polynomial leaves of the signal near the place, for the noise.
     step : float
         Digit of the signal.
     inside : bool
@@ -152,15 +152,23 @@ def _residual(distance: FloatArray, signal: FloatArray) -> FloatArray:
     low, high = NOISE_POINTS
     size = int(np.clip(np.sum(np.abs(distance) <= NOISE_WIDTH), low, high))
     rows = np.sort(np.argsort(np.abs(distance), kind="stable")[:size])
-    if rows.size <= NOISE_DEGREE + 2:
+    degree = _noise_degree(rows.size)
+    if rows.size <= degree + 2:
         return np.zeros(rows.size)
     place = distance[rows] - distance[rows].mean()
-    basis, _ = np.linalg.qr(np.vander(place / np.abs(place).max(), NOISE_DEGREE + 1))
+    basis, _ = np.linalg.qr(np.vander(place / np.abs(place).max(), degree + 1))
     return np.asarray(signal[rows] - basis @ (basis.T @ signal[rows]))
 
 
+def _noise_degree(size: int) -> int:
+    """Degree of the polynomial that is taken off before the noise is judged."""
+    return 5 if size >= 20 else 3
+
+
 def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
-    """Correlation of the noise in each of some stretches, from its own residuals and its neighbours'.
+    """Noise in each of some stretches, from its own residuals and its neighbours'.
+
+    The correlation is averaged over `reach` neighbours on either side, the variance over the next ones.
 
     Parameters
     ----------
@@ -178,21 +186,20 @@ def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
     power = covariances[:, :1]
     normal = np.divide(covariances, power, out=np.zeros_like(covariances), where=power > 0)
     normal *= sizes[:, None]
+    padded = np.pad(power[:, 0], 1, mode="edge")
+    smooth = (padded[:-2] + 2 * padded[1:-1] + padded[2:]) / 4
     found = []
-    for index in range(len(stretches)):
-        near = slice(max(0, index - reach), index + reach + 1)
-        weight = float(sizes[near].sum())
-        mean = normal[near].sum(axis=0) / weight if weight else np.zeros(LAGS)
-        found.append(fit_noise(mean, int(np.median(sizes[near])), NOISE_DEGREE))
+    for index, piece in enumerate(stretches):
+        degree = _noise_degree(int(sizes[index]))
+        near = np.arange(max(0, index - reach), min(index + reach + 1, len(stretches)))
+        near = near[[_noise_degree(int(size)) == degree for size in sizes[near]]]
+        mean = normal[near].sum(axis=0) / max(float(sizes[near].sum()), 1.0)
+        noise = fit_noise(mean, int(np.median(sizes[near])), degree)
+        amplitude = 0.0
+        if sizes[index] > degree + 2:
+            amplitude = noise_amplitude(float(smooth[index]), int(sizes[index]), degree, noise)
+        found.append(replace(noise, amplitude=max(amplitude, piece.step / float(np.sqrt(12)))))
     return found
-
-
-def _amplitude(piece: Stretch, noise: Noise) -> float:
-    """Standard deviation of the noise, not below that of the digit."""
-    size = piece.residual.size
-    square = float(piece.residual @ piece.residual) / max(size, 1)
-    found = noise_amplitude(square, size, NOISE_DEGREE, noise) if size > NOISE_DEGREE + 2 else 0.0
-    return max(found, piece.step / np.sqrt(12))
 
 
 def _window(piece: Stretch, width: float, place: float = 0.0) -> NDArray[np.intp]:
@@ -234,7 +241,7 @@ def fitted_value(piece: Stretch, noise: Noise, width: float, place: float = 0.0)
     scale = float(np.abs(distance).max())
     operator = polynomial_operator(distance / scale, DEGREE)
     value, slope, bend = operator @ piece.signal[rows]
-    amplitude = _amplitude(piece, noise)
+    amplitude = noise.amplitude
     error = amplitude * float(np.sqrt(variance_factor(operator[0], noise)))
     return Value(
         value=float(value),
@@ -265,7 +272,7 @@ def mean_value(piece: Stretch, noise: Noise, width: float) -> Value:
     if rows.size < 2:
         rows = np.sort(np.argsort(np.abs(piece.distance), kind="stable")[:3])
     weights = np.full(rows.size, 1 / rows.size)
-    amplitude = _amplitude(piece, noise)
+    amplitude = noise.amplitude
     error = amplitude * float(np.sqrt(variance_factor(weights, noise)))
     error = float(np.hypot(error, _digit_error(piece, amplitude)))
     return Value(float(weights @ piece.signal[rows]), error, 0.0, 0.0, False)

@@ -45,10 +45,13 @@ class Noise:
         Part of the variance that is correlated.
     persistence : float
         Correlation of that part between neighbours.
+    amplitude : float
+        Standard deviation.
     """
 
     share: float = 0.0
     persistence: float = 0.0
+    amplitude: float = 1.0
 
     @property
     def independent_every(self) -> float:
@@ -94,7 +97,7 @@ def polynomial_operator(position: FloatArray, degree: int) -> FloatArray:
         Times the readings: value, slope, half the curvature, ...
     """
     basis = np.vander(position, degree + 1, increasing=True)
-    return np.linalg.pinv(basis)
+    return np.asarray(np.linalg.solve(basis.T @ basis, basis.T), dtype=float)
 
 
 def residual_covariance(residual: FloatArray) -> FloatArray:
@@ -119,7 +122,8 @@ def residual_covariance(residual: FloatArray) -> FloatArray:
 def _projection(size: int, degree: int) -> FloatArray:
     position = np.linspace(-1, 1, size)
     basis, _ = np.linalg.qr(np.vander(position, degree + 1, increasing=True))
-    return np.eye(size) - basis @ basis.T
+    projection: FloatArray = np.eye(size) - basis @ basis.T
+    return projection
 
 
 @lru_cache(maxsize=4096)

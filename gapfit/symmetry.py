@@ -65,8 +65,8 @@ def symmetrise(family: TraceFamily, mode: Literal["auto", "never", "always"] = "
     lonely = [sweep for sweep in sweeps if sweep.field_sign != 0]
     if mode == "always" and lonely:
         raise InputError(
-            f"symmetrise = 'always', but {lonely[0].label} has no partner of the other field direction; measure it, "
-            "or set symmetrise = 'auto'"
+            f"symmetrise = 'always', but {lonely[0].label} has no partner of the other field direction; "
+            "measure it, or set symmetrise = 'auto'"
         )
     notices = _alignment_notices(alignments, family) + _unjoined_notice(lonely, family)
     done = replace(family, sweeps=tuple(sweeps), alignments=tuple(alignments))
@@ -154,7 +154,7 @@ def _fit_difference(
     if first[1] is not None and second[1] is not None:
         across = (first[1] + second[1]) / 2
         blocks.append((first[1] - second[1], across))
-    rows, targets, weights = [], [], []
+    rows, targets = [], []
     for number, (difference, curve) in enumerate(blocks):
         design = np.zeros((grid.size, 5))
         design[:, 0] = savgol_filter(curve, SMOOTH, 2, deriv=1, delta=step)
@@ -393,8 +393,8 @@ def _alignment_notices(alignments: Sequence[Alignment], family: TraceFamily) -> 
     unlike = [alignment for alignment in alignments if alignment.remaining > 2 * NOTABLE]
     if unlike:
         notices.append(
-            f"at {', '.join(f'{a.temperature_K:.3g}' for a in unlike)} K the two field directions still differ "
-            "after alignment, beyond noise; their mean is used"
+            "the two field directions still differ after alignment, beyond noise, at "
+            f"{', '.join(f'{a.temperature_K:.3g}' for a in unlike)} K; their mean is used"
         )
     return tuple(notices)
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from math import log, pi
 from typing import Literal
 
@@ -336,12 +337,12 @@ class Sweep:
         """What is swept, in T, V or m^-2."""
         return {"field": self.field_T, "gate": self.gate_V, "density": self.density_per_m2}[self.kind]
 
-    @property
+    @cached_property
     def mean_temperature(self) -> float:
         """Median temperature, K."""
         return float(np.median(self.temperature_K))
 
-    @property
+    @cached_property
     def mean_field(self) -> float:
         """Median absolute field, T: the fixed field of a gate or density sweep."""
         return float(np.median(np.abs(self.field_T)))
