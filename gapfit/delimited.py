@@ -246,6 +246,8 @@ def _assemble(
     numbers = np.concatenate([part.numbers for part in parts])
     texts = [row for part in parts for row in part.texts]
     index = np.concatenate([part.index for part in parts])
+    if index.size == 0:
+        raise FileError("no whole rows of numbers were found", file=source)
     comments, notices = remarks
     number_names = [name for name, yes in zip(layout.names, layout.numeric, strict=True) if yes]
     text_names = [name for name, yes in zip(layout.names, layout.numeric, strict=True) if not yes]

@@ -94,7 +94,7 @@ class Dialect:
 
     def split(self, line: str) -> list[str]:
         """Cells of a line, stripped and without quotes."""
-        if '"' in line:
+        if '"' in line and len(line) < csv.field_size_limit():
             plain = line.strip() if self.delimiter is None else line
             reader = csv.reader([plain], delimiter=self.delimiter or " ", skipinitialspace=True)
             return [cell.strip() for cell in next(reader)]

@@ -9,6 +9,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from scipy.constants import elementary_charge
 
 from gapfit.complaints import key_lines
@@ -331,3 +333,54 @@ def test_lines_of_keys():
     text = '[a]\nb = 1 # c = 2\n"d e" = 3\n\n[a.f]\ng.h = { i = 1 }\n[[j]]\n'
     expected = {"a": 1, "a.b": 2, "a.d e": 3, "a.f": 5, "a.f.g.h": 6, "j": 7}
     assert key_lines(text) == expected
+
+
+# --- nothing but a StudyError ever comes out --------------------------------------------------------------
+
+LEAVES = st.sampled_from(
+    [
+        "1",
+        "0",
+        "-3",
+        "1.5",
+        "1e400",
+        "nan",
+        "inf",
+        "true",
+        '""',
+        '"x"',
+        '"1/3"',
+        '"auto"',
+        "2031-02-03",
+        "[]",
+        "{}",
+    ]
+)
+KEYS = st.sampled_from(["column", "unit", "from_name", "table", "scale", "low_K", "high_K", "x", "kind"])
+VALUES = st.recursive(
+    LEAVES,
+    lambda inner: st.one_of(
+        st.lists(inner, max_size=3).map(lambda items: f"[{', '.join(items)}]"),
+        st.dictionaries(KEYS, inner, max_size=3).map(
+            lambda items: "{ " + ", ".join(f"{key} = {value}" for key, value in items.items()) + " }"
+        ),
+    ),
+    max_leaves=5,
+)
+LINES = [number for number, line in enumerate(TRACES.splitlines()) if "=" in line]
+
+
+@settings(max_examples=300, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(line=st.sampled_from(LINES), value=VALUES)
+def test_any_value_of_any_key_gives_a_study_or_a_study_error(line, value, folder):
+    rows = TRACES.splitlines()
+    rows[line] = f"{rows[line].split('=')[0]}= {value}"
+    (folder / "study.toml").write_text("\n".join(rows))
+    try:
+        study = load_study(folder)
+    except StudyError as error:
+        told = str(error)
+        assert "Input should" not in told
+        assert "@" not in told  # tags of unions are no words for users
+        return
+    assert json.dumps(study_as_dict(study))

@@ -578,3 +578,53 @@ def test_a_column_beside_its_own_channels_that_is_never_negative():
     assert not looks_like_magnitude("Vxx", SIGNED, columns)
     assert not looks_like_magnitude("Vxx_X", POSITIVE, columns)
     assert not looks_like_magnitude("Vxx", POSITIVE, ("B", "Vxx", "Vxy_X", "Vxy_Y"))
+
+
+# --- nothing but a FileError ever comes out ---------------------------------------------------------------
+
+PIECES = st.sampled_from(
+    [
+        "1",
+        "2.5",
+        "-3e-7",
+        "1,5",
+        "nan",
+        "B",
+        "T (K)",
+        "\t",
+        ";",
+        ",",
+        " ",
+        "\n",
+        "\r\n",
+        "#",
+        '"',
+        "'",
+        "\0",
+        "é",
+        "/",
+        "|",
+    ]
+)
+
+
+@settings(max_examples=300, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(
+    data=st.one_of(
+        st.binary(max_size=300),
+        st.lists(PIECES, max_size=80).map(lambda pieces: "".join(pieces).encode("latin-1")),
+        st.binary(max_size=60).map(lambda junk: b"\x89HDF\r\n\x1a\n" + junk),
+        st.binary(max_size=60).map(lambda junk: b"CDF\x01" + junk),
+        st.binary(max_size=60).map(lambda junk: gzip.compress(b"1 2\n3 4\n")[:-8] + junk),
+    )
+)
+def test_any_bytes_give_a_table_or_a_file_error(data, tmp_path):
+    path = tmp_path / "any.bin"
+    path.write_bytes(data)
+    try:
+        table = read_table(path, missing="keep")
+    except FileError:
+        return
+    assert len(table) > 0
+    assert all(len(column) == len(table) for column in (*table.values.values(), *table.texts.values()))
+    assert np.all(np.diff(table.row) > 0)
