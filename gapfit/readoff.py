@@ -30,10 +30,7 @@ __all__ = ["SERIES_TEXT_COLUMNS", "SeriesSettings", "series_from_table", "series
 FloatArray = NDArray[np.float64]
 
 SERIES_TEXT_COLUMNS = (
-    "filling", "field_T", "temperature_K", "temperature_error_K",
-    _RHO, f"{_RHO}_error", _SIGMA, f"{_SIGMA}_error", "rho_xy_ohm",
-    "sample", "cooldown", "contacts", "direction", "drive_current_A", "total_field_T",
-    "reading", "flags", "excluded", "reason",
+    "filling", "sample", "cooldown", "contacts", "direction", "reading", "flags", "excluded", "reason",
 )  # fmt: skip
 """Columns of a table of minima that are text although they may look like numbers."""
 
@@ -376,9 +373,10 @@ def series_to_columns(series: Sequence[TemperatureSeries]) -> dict[str, list[Any
 
 
 _COLUMNS = (
-    "filling", "field_T", "temperature_K", "temperature_error_K", _RHO, f"{_RHO}_error", _SIGMA, f"{_SIGMA}_error",
-    "rho_xy_ohm", "sample", "cooldown", "contacts", "direction", "drive_current_A", "total_field_T", "reading",
-    "flags", "excluded", "reason",
+    "filling", "field_T", "temperature_K", "temperature_error_K",
+    _RHO, f"{_RHO}_error", _SIGMA, f"{_SIGMA}_error", "rho_xy_ohm",
+    "sample", "cooldown", "contacts", "direction", "drive_current_A", "total_field_T",
+    "reading", "flags", "excluded", "reason",
 )  # fmt: skip
 
 
