@@ -59,7 +59,9 @@ def decode(data: bytes, source: Path) -> str:
         raise FileError(
             "this is neither text nor HDF5 nor NetCDF; export the data as delimited text", file=source
         )
-    return text.replace("\r\r\n", "\n").replace("\r\n", "\n").replace("\r", "\n").rstrip("\x1a")
+    if "\r" in text:
+        text = text.replace("\r\r\n", "\n").replace("\r\n", "\n").replace("\r", "\n")
+    return text.rstrip("\x1a")
 
 
 def _decode_bytes(data: bytes) -> str:
