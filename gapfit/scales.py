@@ -1,0 +1,313 @@
+"""Axes that suit the data: units with a prefix, linear-logarithmic readings, ticks, numbers in print."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from matplotlib.markers import TICKDOWN, TICKRIGHT, TICKUP
+from matplotlib.ticker import FixedFormatter, FixedLocator, NullLocator
+from numpy.typing import ArrayLike, NDArray
+
+from gapfit.series import TemperatureSeries
+from gapfit.style import Axes
+
+__all__ = [
+    "AxisUnit",
+    "ReadingScale",
+    "logarithmic_ticks",
+    "nice_temperatures",
+    "plain_number",
+    "reading_scale",
+    "reading_unit",
+    "set_ticks",
+    "symbol_of",
+    "temperature_ticks_above",
+    "value_with_interval",
+]
+
+FloatArray = NDArray[np.float64]
+_PREFIXES = {-15: "f", -12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}
+_STEPS = (1.0, 2.0, 5.0)
+MINUS = "\N{MINUS SIGN}"
+NOT_SEEN = 2.0
+"""A reading below this many standard errors calls for an axis that is linear near zero."""
+
+
+# ------------------------------------------------------------------------------------------------- units
+
+
+@dataclass(frozen=True)
+class AxisUnit:
+    """A unit with its prefix.
+
+    Attributes
+    ----------
+    name : str
+        Such as ``"kΩ"``.
+    size : float
+        In ohm or siemens.
+    """
+
+    name: str
+    size: float
+
+
+def reading_unit(values: ArrayLike, quantity: str) -> AxisUnit:
+    """Unit in which the largest reading is a number that a reader likes.
+
+    Parameters
+    ----------
+    values : array_like, ohm or S
+    quantity : {"rho_xx", "sigma_xx"}
+
+    Returns
+    -------
+    AxisUnit
+    """
+    largest = float(np.abs(np.asarray(values, float)).max(initial=0.0))
+    exponent = 3 * int(np.floor(np.log10(largest) / 3 + 1e-9)) if largest > 0 else 0
+    if quantity == "rho_xx" and 1.0 <= largest < 1e4:
+        exponent = 0
+    exponent = min(max(exponent, min(_PREFIXES)), max(_PREFIXES))
+    return AxisUnit(_PREFIXES[exponent] + ("Ω" if quantity == "rho_xx" else "S"), 10.0**exponent)
+
+
+def symbol_of(series: TemperatureSeries) -> str:
+    """Symbol of the readings as mathtext; a resistance where the geometry is unknown."""
+    if series.quantity == "sigma_xx":
+        return r"\sigma_{xx}" if series.geometry_known else r"G_{xx}"
+    return r"\rho_{xx}" if series.geometry_known else r"R_{xx}"
+
+
+# ------------------------------------------------------------------------------- linear-logarithmic readings
+
+
+@dataclass(frozen=True)
+class ReadingScale:
+    """Axis of readings, logarithmic, and linear near zero where readings are not seen above their errors.
+
+    Attributes
+    ----------
+    unit : AxisUnit
+    linear_below : float
+        Absolute readings below this are drawn on a linear scale; zero for a logarithmic axis. In `unit`.
+    low, high : float
+        Ends of the axis, in `unit`.
+    """
+
+    unit: AxisUnit
+    linear_below: float
+    low: float
+    high: float
+
+    def apply(self, axes: Axes, bare: bool = False) -> None:
+        """Give axes this scale on the y axis, with ticks and plain numbers unless they are to be bare."""
+        if self.linear_below:
+            axes.set_yscale("symlog", linthresh=self.linear_below, linscale=0.8)
+            axes.axhspan(-self.linear_below, self.linear_below, color="#f3f3f3", linewidth=0, zorder=0)
+            axes.axhline(0.0, color="#9a9a9a", linewidth=0.5, zorder=0.5)
+        else:
+            axes.set_yscale("log")
+        axes.set_ylim(self.low, self.high)
+        major, minor = ([], []) if bare else self._ticks()
+        set_ticks(axes, "y", major, [plain_number(tick) for tick in major], minor)
+
+    def _ticks(self) -> tuple[list[float], list[float]]:
+        if not self.linear_below:
+            return logarithmic_ticks(self.low, self.high)
+        up, up_minor = logarithmic_ticks(self.linear_below, max(self.high, self.linear_below * 1.01), False)
+        down: list[float] = []
+        if self.low < -self.linear_below:
+            down = [-tick for tick in logarithmic_ticks(self.linear_below, -self.low, False)[0]]
+        spare = [tick for tick in up if tick > 1.9 * self.linear_below]
+        major = sorted({0.0, self.linear_below, *spare, *down})
+        if self.low <= -self.linear_below:
+            major = sorted({-self.linear_below, *major})
+        return major, up_minor
+
+    def words(self) -> str:
+        """What a legend says about the linear part."""
+        return f"linear scale below {plain_number(self.linear_below)} {self.unit.name}"
+
+
+def reading_scale(series: TemperatureSeries, factor: ArrayLike = 1.0) -> ReadingScale:
+    """Axis for the readings of a series, excluded ones included.
+
+    Parameters
+    ----------
+    series : TemperatureSeries
+    factor : array_like[n_point]
+        Readings are multiplied by this before they are drawn.
+
+    Returns
+    -------
+    ReadingScale
+    """
+    weight = np.broadcast_to(np.asarray(factor, float), series.value.shape)
+    value, error = series.value * weight, series.error * weight
+    if np.ndim(factor) == 0:
+        value = np.append(value, [point.value for point in series.excluded])
+        error = np.append(error, [point.error for point in series.excluded])
+    known = np.isfinite(value) & np.isfinite(error)
+    value, error = value[known], error[known]
+    unit = reading_unit(value, series.quantity)
+    value, error = value / unit.size, error / unit.size
+    faint = value <= NOT_SEEN * error
+    highest = float((value + error).max())
+    if not faint.any():
+        return ReadingScale(unit, 0.0, float(value.min()) / 2.2, highest * 2.2)
+    below = _round_up(float(NOT_SEEN * np.median(error[faint])))
+    lowest = min(float((value - 1.3 * error).min()), -0.3 * below)
+    return ReadingScale(unit, below, lowest, max(highest * 2.2, 2 * below))
+
+
+def _round_up(value: float) -> float:
+    decade = 10 ** np.floor(np.log10(value))
+    return float(next(step * decade for step in (*_STEPS, 10.0) if step * decade >= value * (1 - 1e-9)))
+
+
+# --------------------------------------------------------------------------------------------------- ticks
+
+
+def logarithmic_ticks(low: float, high: float, fill: bool = True) -> tuple[list[float], list[float]]:
+    """Major and minor ticks of a logarithmic axis.
+
+    Parameters
+    ----------
+    low, high : float
+        Ends, above zero.
+    fill : bool
+        Whether 2 and 5 become major ticks where there are fewer than two decades.
+
+    Returns
+    -------
+    major, minor : list of float
+        With more than seven decades every second or third decade is major.
+    """
+    decades = range(int(np.floor(np.log10(low) - 1e-9)), int(np.ceil(np.log10(high) + 1e-9)) + 1)
+    inside = [10.0**k for k in decades if low <= 10.0**k * (1 + 1e-9) and 10.0**k <= high * (1 + 1e-9)]
+    steps = [step * 10.0**k for k in decades for step in range(1, 10) if low <= step * 10.0**k <= high]
+    if fill and len(inside) < 3:
+        full = [step * 10.0**k for k in decades for step in _STEPS if low <= step * 10.0**k <= high]
+        major = full if len(full) > 1 else _thinned(steps, 5)
+        return major, [step for step in steps if step not in major]
+    every = max(1, -(-len(inside) // 7))
+    major = inside[::-1][::every][::-1]
+    return major, [tick for tick in (inside if every > 1 else steps) if tick not in major]
+
+
+def _thinned(values: Sequence[float], most: int) -> list[float]:
+    return list(values[:: max(1, -(-len(values) // most))])
+
+
+def nice_temperatures(low: float, high: float) -> list[float]:
+    """Round temperatures between two ends, the roundest first."""
+    decades = range(int(np.floor(np.log10(low))), int(np.ceil(np.log10(high))) + 1)
+    found = []
+    for steps in ((1.0,), (2.0, 5.0), (3.0,), (1.5, 7.0), (1.2, 2.5, 4.0, 6.0, 8.0)):
+        found += [step * 10.0**k for k in decades for step in steps]
+    return [value for value in found if low * (1 - 1e-9) <= value <= high * (1 + 1e-9)]
+
+
+_TICK: dict[str, Any] = {
+    "linestyle": "none", "color": "black", "markeredgewidth": 0.6, "clip_on": False, "zorder": 5,
+}  # fmt: skip
+
+
+def set_ticks(
+    axes: Axes, which: str, places: Sequence[float], labels: Sequence[str], minor: Sequence[float] = ()
+) -> None:
+    """Fixed ticks; the minor ones as a single artist, which draws much faster.
+
+    Parameters
+    ----------
+    axes : Axes
+    which : {"x", "y"}
+    places : sequence of float
+    labels : sequence of str
+    minor : sequence of float
+    """
+    axis = axes.xaxis if which == "x" else axes.yaxis
+    axis.set_major_locator(FixedLocator(places))
+    axis.set_major_formatter(FixedFormatter(labels))
+    axis.set_minor_locator(NullLocator())
+    edge = np.zeros(len(minor))
+    look = _TICK | {"markersize": 1.5, "markeredgewidth": 0.4}
+    if which == "x":
+        axes.plot(minor, edge, transform=axes.get_xaxis_transform(), marker=TICKUP, **look)
+    else:
+        axes.plot(edge, minor, transform=axes.get_yaxis_transform(), marker=TICKRIGHT, **look)
+
+
+def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float) -> None:
+    """Ticks of temperature along the top, for axes whose x is a negative power of temperature.
+
+    Parameters
+    ----------
+    axes : Axes
+        With x limits set.
+    exponent : float
+        x = T^-exponent.
+    width_mm : float, mm
+        Width of the axes, so that labels keep apart.
+    """
+    low, high = axes.get_xlim()
+    cold, warm = high ** (-1 / exponent), max(low, 1e-3 * high) ** (-1 / exponent)
+    taken: list[tuple[float, float, float]] = []
+    for temperature in nice_temperatures(cold, warm):
+        at = (temperature**-exponent - low) / (high - low) * width_mm
+        half = 0.72 * len(plain_number(temperature)) + 0.7
+        free = all(abs(at - other) > half + room for _, other, room in taken)
+        if free and half - 2.0 <= at <= width_mm - half + 2.0:
+            taken.append((temperature, at, half))
+    ticks = sorted(temperature for temperature, _, _ in taken)
+    at_top = axes.get_xaxis_transform()
+    places = [tick**-exponent for tick in ticks]
+    axes.plot(places, np.ones(len(ticks)), transform=at_top, marker=TICKDOWN, markersize=2.6, **_TICK)
+    for tick, place in zip(ticks, places, strict=True):
+        axes.annotate(
+            plain_number(tick), (place, 1.0), (0, 2.2), xycoords=at_top, textcoords="offset points",
+            ha="center", va="bottom", annotation_clip=False,
+        )  # fmt: skip
+
+
+# ----------------------------------------------------------------------------------------- numbers in print
+
+
+def plain_number(value: float) -> str:
+    """A round number for a tick: ``0.05``, ``2000``, ``10⁶`` as mathtext beyond five digits."""
+    size = abs(value)
+    if value and (size >= 1e5 or size < 1e-4):
+        exponent = int(np.floor(np.log10(size) + 1e-9))
+        lead = value / 10.0**exponent
+        head = "" if abs(abs(lead) - 1) < 1e-6 else rf"{abs(lead):g}\times "
+        return rf"${'-' if value < 0 else ''}{head}10^{{{exponent}}}$"
+    return f"{value:.6g}".replace("-", MINUS)
+
+
+def value_with_interval(median: float, low: float, high: float) -> str:
+    """Median with its distances to the ends of an interval, two digits of the smaller one.
+
+    Parameters
+    ----------
+    median, low, high : float
+
+    Returns
+    -------
+    str
+        ``"6.18 ± 0.05"``, or ``"6.18 +0.09 −0.05"`` where the distances differ by more than a fifth.
+    """
+    up, down = high - median, median - low
+    smaller = min([step for step in (up, down) if step > 0], default=abs(median) or 1.0)
+    digits = max(0, 1 - int(np.floor(np.log10(smaller))))
+    if abs(up - down) <= 0.2 * max(up, down):
+        return f"{median:.{digits}f} ± {(up + down) / 2:.{digits}f}".replace("-", MINUS)
+    return f"{median:.{digits}f} +{up:.{digits}f} -{down:.{digits}f}".replace("-", MINUS)
+
+
+def first_of(values: Iterable[Any]) -> list[Any]:
+    """Values in order of first appearance, each once."""
+    return list(dict.fromkeys(values))
