@@ -87,8 +87,8 @@ LIKELY = 0.5
 MANY_DRAWS = 2000
 
 CONVENTIONS = {
-    "gap": "gap Δ, in ρ = ρ₀ exp(−Δ / 2k_BT)",
-    "half": "half gap Δ/2 (activation energy), in ρ = ρ₀ exp(−(Δ/2) / k_BT)",
+    "gap": "gap Δ, in ρ = ρ₀ exp(−Δ / 2k_B T)",
+    "half": "half gap Δ/2 (activation energy), in ρ = ρ₀ exp[−(Δ/2) / k_B T]",
 }
 """The two ways to quote an activation gap, by the key that options use."""
 
