@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import find_peaks, peak_widths
+from scipy.signal import find_peaks
 
 from gapfit.smoothing import Curve, smooth_curve
 from gapfit.traces import Sweep
@@ -18,6 +18,10 @@ LOG_STEP = 6e-4
 LINEAR_STEP = 6e-4
 FLAT_SHARE = 0.95
 FLAT_ERROR = 0.3
+SHOULDER_DROP = 0.3
+"""A minimum deeper than the first share is flat; its middle is good to the second share of its half-width;
+its shoulder ends where the trace has come down by the third share of its rise (own choices)."""
+
 HIGHEST_FILLING = 12.0
 """Field sweeps are searched for minima up to this filling factor."""
 
@@ -138,70 +142,118 @@ def find_dips(curve: Curve, logarithmic: bool, significance: float = 5.0, share:
     """
     if curve.axis.size < 5:
         return []
-    walled = np.concatenate(([np.inf], curve.value, [np.inf]))
-    walled[[0, -1]] = np.max(curve.value) + np.ptp(curve.value)
+    walled = np.pad(curve.value, 1, constant_values=float(np.max(curve.value)))
     peaks, record = find_peaks(-walled, prominence=0.0)
-    depth = record["prominences"]
-    inner = np.clip(peaks - 1, 0, curve.axis.size - 1)
-    shoulder = np.minimum(np.abs(curve.value[inner] + depth), np.abs(curve.value).max())
-    level = np.maximum(shoulder, 0.2 * np.median(np.abs(curve.value)))
-    seen = (depth > significance * curve.value_error[inner]) & (depth > share * level) & (depth > 0)
-    seen &= (inner > 1) & (inner < curve.axis.size - 2)
-    if not seen.any():
-        return []
-    bases = tuple(part[seen] for part in (depth, record["left_bases"], record["right_bases"]))
-    _, _, left, right = peak_widths(-walled, peaks[seen], 0.5, prominence_data=bases)
-    index = np.arange(curve.axis.size) + 1
-    sides = np.interp(left, index, curve.axis), np.interp(right, index, curve.axis)
-    at_edge = (left < 1) | (right > curve.axis.size)
-    found = [
-        _dip(curve, int(peak), float(deep), float(low), float(high), logarithmic)
-        for peak, deep, low, high in zip(inner[seen], bases[0], *sides, strict=True)
-    ]
-    found = [replace(dip, at_edge=bool(edge)) for dip, edge in zip(found, at_edge, strict=True)]
-    return [dip for dip in found if not dip.at_edge or dip.share > FLAT_SHARE]
+    clear = (
+        record["prominences"] > significance * curve.value_error[np.clip(peaks - 1, 0, curve.axis.size - 1)]
+    )
+    usual = float(np.median(np.abs(curve.value)))
+    found: list[Dip] = []
+    for peak in peaks[clear] - 1:
+        valley = _valley(curve, int(peak), significance)
+        if valley is None or valley.depth < share * max(valley.shoulder, 0.2 * usual):
+            continue
+        dip = _dip(curve, valley, logarithmic)
+        if dip.at_edge and dip.share < FLAT_SHARE:
+            continue
+        twin = next((other for other in found if other.low <= dip.filling <= other.high), None)
+        if twin is None:
+            found.append(dip)
+        elif dip.value < twin.value:
+            found[found.index(twin)] = dip
+    return found
 
 
-def _dip(curve: Curve, peak: int, depth: float, low: float, high: float, logarithmic: bool) -> Dip:
+@dataclass(frozen=True)
+class _Valley:
+    """A minimum of a curve, by index: the lowest point, the two shoulders, and the half-way places."""
+
+    peak: int
+    left: int
+    right: int
+    depth: float
+    shoulder: float
+    low: float
+    high: float
+    at_edge: bool
+
+
+def _shoulder(curve: Curve, peak: int, pace: int, significance: float) -> tuple[int, bool]:
+    """Index of the shoulder on one side of a minimum, and whether the curve ends before it falls again.
+
+    The shoulder is the highest place before the curve has come down by a share of its rise, and beyond noise.
+    """
+    along = curve.value[peak::pace] if pace > 0 or peak > 0 else curve.value[:1]
+    top = np.maximum.accumulate(along)
+    drop = top - along
+    over = (drop > SHOULDER_DROP * (top - along[0])) & (drop > significance * curve.value_error[peak])
+    stop = int(np.argmax(over)) if over.any() else along.size - 1
+    return peak + pace * int(np.argmax(along[: stop + 1])), not over.any()
+
+
+def _valley(curve: Curve, peak: int, significance: float) -> _Valley | None:
+    """Shoulders and half-way places of a minimum, or None where it is not deep beyond noise."""
+    left, left_ends = _shoulder(curve, peak, -1, significance)
+    right, right_ends = _shoulder(curve, peak, 1, significance)
+    rises = np.array([curve.value[left], curve.value[right]]) - curve.value[peak]
+    ends = np.array([left_ends, right_ends])
+    cut = ends & (rises < 0.5 * rises[::-1])
+    depth = float(rises[~cut].min(initial=np.inf))
+    if cut.all() or not depth > significance * curve.value_error[peak]:
+        return None
+    level = curve.value[peak] + depth / 2
+    low = curve.axis[0] if cut[0] else _crossing(curve, peak, -1, level)
+    high = curve.axis[-1] if cut[1] else _crossing(curve, peak, 1, level)
+    shoulder = float(curve.value[peak]) + depth
+    return _Valley(peak, left, right, depth, abs(shoulder), float(low), float(high), bool(cut.any()))
+
+
+def _crossing(curve: Curve, peak: int, pace: int, level: float) -> float:
+    """Place next to a minimum where the curve first reaches a level that it does reach."""
+    along = curve.value[peak::pace]
+    stop = int(np.argmax(along >= level))
+    inner, outer = peak + pace * (stop - 1), peak + pace * stop
+    step = (level - curve.value[inner]) / (curve.value[outer] - curve.value[inner])
+    return float(curve.axis[inner] + step * (curve.axis[outer] - curve.axis[inner]))
+
+
+def _dip(curve: Curve, valley: _Valley, logarithmic: bool) -> Dip:
     """Record of one minimum, refined between the points by slope and curvature."""
+    peak, half = valley.peak, (valley.high - valley.low) / 2
     spacing = float(curve.axis[min(peak + 1, curve.axis.size - 1)] - curve.axis[max(peak - 1, 0)])
     bend = float(curve.curvature[peak])
-    half = (high - low) / 2
     place, spread = float(curve.axis[peak]), half / 2
     if bend > 0:
         place -= float(np.clip(curve.slope[peak] / bend, -spacing, spacing))
         spread = min(float(curve.slope_error[peak]) / bend, spread)
-    correction = _slope_displacement(curve, peak, bend, half)
+    correction = _slope_displacement(curve, valley, bend, half)
     centre, centre_error = place + correction, float(np.hypot(spread, correction / 2))
-    scale = float(np.exp(place)) if logarithmic else 1.0
+    low, high = valley.low, valley.high
+    filling = float(np.exp(place)) if logarithmic else place
+    scale = filling if logarithmic else 1.0
     return Dip(
-        filling=scale if logarithmic else place,
+        filling=filling,
         filling_error=spread * scale,
         centre=float(np.exp(centre)) if logarithmic else centre,
         centre_error=centre_error * scale,
         value=float(curve.value[peak]),
-        depth=depth,
+        depth=valley.depth,
         low=float(np.exp(low)) if logarithmic else low,
         high=float(np.exp(high)) if logarithmic else high,
         noise=float(curve.value_error[peak]),
+        at_edge=valley.at_edge,
     )
 
 
-def _slope_displacement(curve: Curve, peak: int, bend: float, half: float) -> float:
+def _slope_displacement(curve: Curve, valley: _Valley, bend: float, half: float) -> float:
     """Centre minus lowest point of a dip in a sloping background, from its shoulders and its curvature.
 
     For rho = background * dip the lowest point has (ln dip)' = -(ln background)', which lies
-    (ln background)' / (ln dip)'' below the centre.
+    (ln background)' / (ln dip)'' below the centre. It is no more than half of the half-width.
     """
-    rising = np.sign(np.diff(curve.value))
-    left = np.flatnonzero(rising[:peak] > 0)
-    right = np.flatnonzero(rising[peak:] < 0)
-    if not left.size or not right.size or not bend > 0:
+    low, high = float(curve.value[valley.left]), float(curve.value[valley.right])
+    if low <= 0 or high <= 0 or valley.at_edge or not bend > 0:
         return 0.0
-    low, high = int(left[-1]) + 1, peak + int(right[0])
-    value = curve.value
-    if value[low] <= 0 or value[high] <= 0 or high <= low:
-        return 0.0
-    slope = float(np.log(value[high] / value[low]) / (curve.axis[high] - curve.axis[low]))
-    sharpness = bend / max(float(value[peak]), float(curve.value_error[peak]))
+    slope = float(np.log(high / low) / (curve.axis[valley.right] - curve.axis[valley.left]))
+    sharpness = bend / max(float(curve.value[valley.peak]), float(curve.value_error[valley.peak]))
     return float(np.clip(slope / sharpness, -half / 2, half / 2))

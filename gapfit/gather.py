@@ -53,7 +53,7 @@ class ReadingSettings:
 
     reading: ReadingKind = "exact"
     quantity: Literal["auto", "rho_xx", "sigma_xx"] = "auto"
-    window: float = 0.004
+    window: float = 0.002
     relative_reading_error: float = 0.0
     temperature_relative_error: float | None = None
     sample: str = ""
