@@ -48,8 +48,7 @@ def turning_points(abscissa: FloatArray, threshold: float) -> list[int]:
         elif heading and -step * heading >= threshold:
             turns.append(best)
             heading, best = -heading, index
-    last = best if heading else len(abscissa) - 1
-    return [*turns, last] if last == len(abscissa) - 1 else [*turns, last, len(abscissa) - 1]
+    return [*turns, len(abscissa) - 1]
 
 
 def plateau_edges(level: FloatArray, relative: float, reach: int = 5) -> list[int]:
