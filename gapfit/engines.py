@@ -17,7 +17,7 @@ __all__ = ["fast_diagnostics", "fast_draws", "sampled_draws"]
 
 FloatArray = NDArray[np.float64]
 
-CARRIES_WEIGHT = 0.02
+CARRIES_WEIGHT = 0.03
 SMALLEST_FAST_ESS = 400.0
 LARGEST_DISAGREEMENT = 4.0
 KEPT_DRAWS = 4000

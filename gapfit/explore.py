@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,7 +62,7 @@ class Mixture:
         which = np.minimum(which, self.weight.size - 1)
         normal = rng.standard_normal((n_draw, self.n_dim))
         stretch = np.sqrt(DEGREES / rng.chisquare(DEGREES, n_draw))
-        moved = np.einsum("nij,nj->ni", self.root[which], normal) * stretch[:, None]
+        moved = (self.root[which] @ normal[:, :, None])[:, :, 0] * stretch[:, None]
         return np.asarray(self.mean[which] + moved)
 
     def component_terms(self, points: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -75,14 +76,19 @@ class Mixture:
         -------
         terms, distance : ndarray[n_draw, n_component]
         """
+        inverse, height = self._whitener
+        scaled = (points - self.mean[:, None, :]) @ inverse
+        distance = np.square(scaled, out=scaled).sum(axis=2).T
+        return height - (DEGREES + self.n_dim) / 2 * np.log1p(distance / DEGREES), distance
+
+    @cached_property
+    def _whitener(self) -> tuple[FloatArray, FloatArray]:
+        """Transposed inverse roots, and log of weight times density at the centre of every component."""
         d = self.n_dim
-        inverse = np.linalg.inv(self.root)
-        scaled = np.einsum("kij,nkj->nki", inverse, points[:, None, :] - self.mean)
-        distance = np.einsum("nki,nki->nk", scaled, scaled)
         log_volume = np.log(np.einsum("kii->ki", self.root)).sum(axis=1)
         constant = gammaln((DEGREES + d) / 2) - gammaln(DEGREES / 2) - d / 2 * np.log(DEGREES * np.pi)
-        terms = np.log(self.weight) + constant - log_volume
-        return terms - (DEGREES + d) / 2 * np.log1p(distance / DEGREES), distance
+        inverse = np.swapaxes(np.linalg.inv(self.root), 1, 2)
+        return np.ascontiguousarray(inverse), np.log(self.weight) + constant - log_volume
 
     def log_density(self, points: FloatArray) -> FloatArray:
         """Log density, ndarray[n_draw]."""
@@ -110,8 +116,8 @@ class Mixture:
         mass = share.sum(axis=0) + 1e-12
         pull = share * (DEGREES + self.n_dim) / (DEGREES + distance)
         mean = (pull.T @ points) / (pull.sum(axis=0)[:, None] + 1e-300)
-        offset = points[:, None, :] - mean
-        scatter = np.einsum("nk,nki,nkj->kij", pull, offset, offset) / mass[:, None, None]
+        offset = (points - mean[:, None, :]) * np.sqrt(pull.T)[:, :, None]
+        scatter = np.swapaxes(offset, 1, 2) @ offset / mass[:, None, None]
         count = mass * effective_weights(np.log(weight + 1e-300))
         keep = count / (count + 2 * self.n_dim)
         old = np.einsum("kij,klj->kil", self.root, self.root)

@@ -1,9 +1,9 @@
 """The sampling engine: emcee on one combination, several independent ensembles, run until they agree.
 
-The first ensemble starts from the prior; the second is tempered from the prior to the posterior and
-never sees the fast engine's proposal; the others start from the modes found. All but the second mix an
-independence proposal, the Student-t mixture of the fast engine, with local ensemble moves. What the
-ensembles disagree about is therefore visible.
+The first ensemble starts from the prior; the second is tempered from the prior to the posterior, makes a
+proposal of its own of what it finds there, and knows nothing of the fast engine; the others start from the
+modes found. All mix an independence proposal, a Student-t mixture fitted again between rounds, with local
+ensemble moves. What the ensembles disagree about is therefore visible.
 """
 
 from __future__ import annotations
@@ -51,7 +51,7 @@ class SamplingRules:
     """
 
     n_walker: int = 128
-    n_from_modes: int = 2
+    n_from_modes: int = 1
     warm_up: int = 50
     max_steps: int = 3200
     smallest_ess: float = SMALLEST_ESS
@@ -108,31 +108,35 @@ def sample(
     Chains
     """
     seeds = seed.spawn(2 + rules.n_from_modes)
-    states = [np.random.RandomState(np.random.MT19937(child)).get_state() for child in seeds]
+    states: list[Any] = [np.random.RandomState(np.random.MT19937(child)).get_state() for child in seeds]
     rngs = [np.random.default_rng(child.spawn(1)[0]) for child in seeds]
+    particles = _tempered_from_prior(posterior, rngs[BLIND])
     positions = [
         rngs[0].standard_normal((rules.n_walker, posterior.n_fitted)),
-        _tempered_from_prior(posterior, rules.n_walker, rngs[1]),
+        particles[rngs[BLIND].choice(N_PARTICLE, rules.n_walker, replace=False)],
         *[_around_modes(explored, rules.n_walker, rng) for rng in rngs[2:]],
     ]
-    proposal, n_step, total = explored.proposal, rules.warm_up, 0
+    own = _fitted(particles, rngs[BLIND])
+    proposals = [own if index == BLIND else explored.proposal for index in range(len(seeds))]
+    n_step, total = rules.warm_up, 0
     while True:
         ensembles = [
-            _advance(posterior, None if index == BLIND else proposal, position, state, n_step)
-            for index, (position, state) in enumerate(zip(positions, states, strict=True))
+            _advance(posterior, proposal, position, state, n_step)
+            for proposal, position, state in zip(proposals, positions, states, strict=True)
         ]
         total += n_step
         chains = _summarise(ensembles, total, rules.smallest_ess)
         if total > rules.warm_up and (not chains.reasons or total + 2 * n_step > rules.max_steps):
             return chains
-        proposal = _adapted(chains, rngs[0])
+        own, shared = _adapted(chains, rngs)
+        proposals = [own if index == BLIND else shared for index in range(len(seeds))]
         positions = [ensemble.get_chain()[-1] for ensemble in ensembles]
         states = [ensemble.random_state for ensemble in ensembles]
         n_step *= 2
 
 
 def _advance(
-    posterior: LogPosterior, proposal: Mixture | None, position: FloatArray, state: Any, n_step: int
+    posterior: LogPosterior, proposal: Mixture, position: FloatArray, state: Any, n_step: int
 ) -> emcee.EnsembleSampler:
     """One ensemble, moved on by some steps from a position and a state of its random numbers."""
     sampler = emcee.EnsembleSampler(*position.shape, posterior, moves=_moves(proposal), vectorize=True)
@@ -141,10 +145,14 @@ def _advance(
     return sampler
 
 
-def _adapted(chains: Chains, rng: np.random.Generator) -> Mixture:
-    """Proposal fitted to the draws of the ensembles that use one; those draws are then forgotten."""
-    informed = np.delete(chains.whitened, BLIND, axis=0)
-    draws = informed[:, informed.shape[1] // 2 :].reshape(-1, informed.shape[-1])
+def _adapted(chains: Chains, rngs: list[np.random.Generator]) -> tuple[Mixture, Mixture]:
+    """Proposals fitted to the draws of a round, which are then forgotten: of the blind ensemble, of the others."""
+    later = chains.whitened[:, chains.whitened.shape[1] // 2 :]
+    informed = np.delete(later, BLIND, axis=0).reshape(-1, later.shape[-1])
+    return _fitted(later[BLIND].reshape(-1, later.shape[-1]), rngs[BLIND]), _fitted(informed, rngs[0])
+
+
+def _fitted(draws: FloatArray, rng: np.random.Generator) -> Mixture:
     draws = draws[rng.integers(len(draws), size=ADAPTING_DRAWS)]
     return fit_mixture(draws, np.full(len(draws), 1 / len(draws)), N_COMPONENT, 15, rng).widened()
 
@@ -168,21 +176,20 @@ def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess:
     return Chains(whitened, log_posterior, rhat, ess, n_step, tuple(reasons))
 
 
-def _moves(proposal: Mixture | None) -> list[tuple[emcee.moves.Move, float]]:
-    local = [(emcee.moves.StretchMove(), 0.3), (emcee.moves.DEMove(), 0.7)]
-    if proposal is None:
-        return local
+def _moves(proposal: Mixture) -> list[tuple[emcee.moves.Move, float]]:
+    """Half independence proposals, half local ensemble moves."""
 
     def jump(position: FloatArray, random: np.random.RandomState) -> tuple[FloatArray, FloatArray]:
         rng = np.random.default_rng(random.randint(2**31 - 1, size=4))
         offered = rng.permutation(proposal.sample(len(position), rng))
         return offered, proposal.log_density(position) - proposal.log_density(offered)
 
-    return [(emcee.moves.MHMove(jump), 0.5), *((move, share / 2) for move, share in local)]
+    local = [(emcee.moves.StretchMove(), 0.15), (emcee.moves.DEMove(), 0.35)]
+    return [(emcee.moves.MHMove(jump), 0.5), *local]
 
 
-def _tempered_from_prior(posterior: LogPosterior, n_walker: int, rng: np.random.Generator) -> FloatArray:
-    """Walkers from the prior by tempering the likelihood from power zero to one.
+def _tempered_from_prior(posterior: LogPosterior, rng: np.random.Generator) -> FloatArray:
+    """Particles from the prior by tempering the likelihood from power zero to one.
 
     Resampling and local moves: Del Moral, Doucet & Jasra, J. R. Stat. Soc. B 68, 411 (2006); the powers
     keep half of the particles effective. It knows nothing of the fast engine.
@@ -196,13 +203,19 @@ def _tempered_from_prior(posterior: LogPosterior, n_walker: int, rng: np.random.
         weight = np.exp((following - power) * (log_likelihood - log_likelihood.max()))
         chosen = systematic_resample(weight, N_PARTICLE, rng)
         points, log_posterior, power = points[chosen], log_posterior[chosen], following
+        moved = 0.0
         for stretch in STRETCHES:
-            points, log_posterior = _local_step(posterior, points, log_posterior, power, stretch, rng)
-    return np.asarray(points[rng.choice(N_PARTICLE, n_walker, replace=False)])
+            offered = _local_step(posterior, points, log_posterior, power, stretch, rng)
+            moved += float(np.mean(offered[1] != log_posterior))
+            points, log_posterior = offered
+            if moved > MOVES_A_STAGE:
+                break
+    return points
 
 
 N_PARTICLE = 1000
-STRETCHES = (1.0, 0.5, 0.25, 1.0)
+STRETCHES = (1.0, 0.5, 0.25, 0.1) * 8
+MOVES_A_STAGE = 4.0
 
 
 def _next_power(log_likelihood: FloatArray, power: float) -> float:
