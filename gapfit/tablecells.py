@@ -119,7 +119,7 @@ class Column:
 
 
 def unit_factor(row: Row, style: TableStyle) -> float:
-    """Factor from a gap in kelvin to unit and convention of a style, NaN where permittivity or field is unknown."""
+    """Factor from kelvin to unit and convention of a style; NaN where permittivity or field is unknown."""
     if style.unit == "meV":
         return style.factor / KELVIN_PER_MEV
     if style.unit == "coulomb":
