@@ -147,18 +147,20 @@ def _disagreement(
         return 0.0
     share = _shares([fast[index] for index in gapped])
     evidence_error = np.array([explored[index].log_evidence_error for index in gapped])
-    ess = np.array([explored[index].ess for index in gapped])
     first = [fast[index] for index in gapped]
     second = [sampled[index] for index in gapped]
     worst = 0.0
     for probability in (0.025, 0.16, 0.5, 0.84, 0.975):
         where = _mixture_quantile(second, probability)
-        below = np.array(
-            [posterior.probability @ (posterior.coordinates[:, 0] < where) for posterior in first]
-        )
+        beneath = [posterior.coordinates[:, 0] < where for posterior in first]
+        below = np.array([part.probability @ low for part, low in zip(first, beneath, strict=True)])
         total = share @ below
         spread = share * np.hypot(evidence_error, 0.02) * (below - total)
-        chance = share**2 * np.clip(below * (1 - below), 1e-4, None) * (1 / ess + 1 / sampled_ess[gapped])
+        own = [
+            np.sum(part.probability**2 * (low - level) ** 2)
+            for part, low, level in zip(first, beneath, below, strict=True)
+        ]
+        chance = share**2 * (np.array(own) + probability * (1 - probability) / sampled_ess[gapped])
         worst = max(worst, abs(total - probability) / np.sqrt(np.sum(spread**2 + chance)))
     return float(worst)
 

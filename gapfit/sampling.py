@@ -146,7 +146,7 @@ def _advance(
 
 
 def _adapted(chains: Chains, rngs: list[np.random.Generator]) -> tuple[Mixture, Mixture]:
-    """Proposals fitted to the draws of a round, which are then forgotten: of the blind ensemble, of the others."""
+    """Proposals fitted to the draws of a round: of the blind ensemble, and of the others."""
     later = chains.whitened[:, chains.whitened.shape[1] // 2 :]
     informed = np.delete(later, BLIND, axis=0).reshape(-1, later.shape[-1])
     return _fitted(later[BLIND].reshape(-1, later.shape[-1]), rngs[BLIND]), _fitted(informed, rngs[0])
