@@ -6,7 +6,8 @@ latent variable with its own posterior:
 
     ln L(theta) = ln sum_w exp[ sum_{i in w} l_i(theta) - cost * (number of readings cut by w) ].
 
-The terms l_i are normalised so that a zero residual at the stated error counts zero; a reading that is
+The terms l_i are normalised so that a zero residual at the stated errors (of reading and temperature,
+the latter through the slope of the data) counts zero; a reading that is
 kept therefore pays for its misfit, one that is cut pays the cost (the reasoning of Jay & Neil, Phys.
 Rev. D 103, 114502 (2021), with a higher cost).
 """
@@ -15,6 +16,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -176,7 +178,7 @@ class Problem:
         return np.asarray(inflation + np.minimum(np.abs(by_temperature), 1e100) ** 2)
 
     def point_terms(self, coordinates: FloatArray) -> FloatArray:
-        """Log-likelihood of every reading, zero for a zero residual at the stated error.
+        """Log-likelihood of every reading, zero for a zero residual at the stated errors.
 
         Parameters
         ----------
@@ -199,7 +201,14 @@ class Problem:
             fit = -(STUDENT_DEGREES + 1) / 2 * np.log1p(squared / _STUDENT_WIDTH)
         else:
             fit = -squared / 2
-        return np.asarray(fit - np.log(variance) / 2)
+        return np.asarray(fit - np.log(variance) / 2 + self._log_scatter / 2)
+
+    @cached_property
+    def _log_scatter(self) -> FloatArray:
+        """Log of the effective variance, relative to the stated one, that the data themselves show."""
+        series = self.series
+        by_temperature = _log_slope(series) * series.temperature_error / (series.temperature * series.error)
+        return np.asarray(np.log1p(by_temperature**2))
 
     def window_terms(self, coordinates: FloatArray) -> FloatArray:
         """Log-likelihood of every window, its cost included, ndarray[n_draw, n_window]."""
@@ -246,6 +255,18 @@ class Problem:
         information = 2 * STUDENT_DEGREES / (STUDENT_DEGREES + 3) if self.student else 2.0
         curvature[:, _INFLATION, _INFLATION] = information * np.sum(share * inflated**2, axis=1)
         return value, gradient, curvature
+
+
+def _log_slope(series: TemperatureSeries) -> FloatArray:
+    """Slope d reading / d ln T of the data at every reading, by least squares over the neighbours."""
+    x, y = np.log(series.temperature), series.value
+    slope = np.zeros_like(x)
+    for index in range(x.size):
+        near = slice(max(0, index - 1), index + 2)
+        centred = x[near] - x[near].mean()
+        norm = float(centred @ centred)
+        slope[index] = float(centred @ y[near]) / norm if norm > 1e-12 else 0.0
+    return slope
 
 
 def _log_sum(terms: FloatArray) -> FloatArray:
@@ -361,7 +382,8 @@ def pooled_objective(
         base[row] = combination.base
     centre, width = problem.prior.centre, problem.prior.width
 
-    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, FloatArray]:
+    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray,
+    FloatArray]:
         scale = np.where(fitted[rows], width, 0.0)
         coordinates = np.where(fitted[rows], centre + width * whitened, base[rows])
         value, gradient, curvature = problem.log_likelihood_with_slopes(coordinates)
