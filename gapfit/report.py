@@ -19,7 +19,7 @@ from gapfit.hall import filling_label
 from gapfit.intervals import Marginal
 from gapfit.mechanisms import PARAMETERS, Parameter
 from gapfit.posterior import STUDENT_DEGREES
-from gapfit.rounding import Rounded, round_interval, round_limit, round_number, round_value
+from gapfit.rounding import Rounded, round_limit, round_number, round_value
 from gapfit.straight import StraightLine
 from gapfit.tablecells import TableStyle, unit_factor
 from gapfit.typeset import render_table, subscripts
@@ -31,7 +31,7 @@ if TYPE_CHECKING:
 __all__ = ["ReportContent", "render_report"]
 
 TABLE_COLUMNS = ("filling", "field", "gap", "interval68", "interval95", "verdict", "p_activated", "mechanism")
-MEMBERS_SHOWN = 8
+MEMBERS_SHOWN = 6
 CAPTIONS = {
     "gaps": "Gaps of all fillings: posterior median with 68 % and 95 % intervals; limits as arrows.",
     "trend": "Gaps against effective field.",
@@ -120,7 +120,6 @@ def render_report(content: ReportContent) -> str:
         loader=PackageLoader("gapfit"),
         autoescape=True,
         undefined=StrictUndefined,
-        trim_blocks=True,
         lstrip_blocks=True,
     )
     page = environment.get_template("report.html.j2").render(
@@ -348,24 +347,20 @@ def _parameter(fit: GapFit, parameter: Parameter) -> dict[str, Any]:
     marginal = fit.marginal(parameter.name)
     interval = marginal.interval(0.95)
     prior = next((item for item in fit.problem.prior.table() if item["name"] == parameter.name), None)
-    unit = series_unit(fit) if parameter.unit == "reading" else parameter.unit
+    unit = _reading_unit(fit) if parameter.unit == "reading" else parameter.unit
     return {
         "meaning": parameter.meaning,
         "unit": unit or "–",
         "distribution": prior["distribution"] if prior else "fixed",
         "prior": f"{_shown(prior['low95'])} to {_shown(prior['high95'])}" if prior else "–",
         "median": _shown(marginal.median),
-        "interval": _range_text(interval.low, interval.high),
+        "interval": f"{_shown(interval.low)} to {_shown(interval.high)}",
         "share": f"{marginal.draws.size / fit.draws.window.size:.2f}",
     }
 
 
-def series_unit(fit: GapFit) -> str:
+def _reading_unit(fit: GapFit) -> str:
     return "Ω" if fit.series.quantity == "rho_xx" else "S"
-
-
-def _range_text(low: float, high: float) -> str:
-    return round_interval(low, high).text if high > low else _shown(low)
 
 
 # ----------------------------------------------------------------------------------- data, methods, sources
@@ -412,4 +407,4 @@ def _flat(value: Any, key: str = "") -> list[tuple[str, str]]:
         return [row for name, item in value.items() for row in _flat(item, f"{key}.{name}".lstrip("."))]
     if isinstance(value, (list, tuple)):
         return [(key, ", ".join(str(item) for item in value))]
-    return [(key, str(value))]
+    return [(key, f"{value:.12g}" if isinstance(value, float) else str(value))]
