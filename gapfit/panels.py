@@ -14,7 +14,8 @@ from numpy.typing import NDArray
 from gapfit.fit import GapFit
 from gapfit.hall import filling_label
 from gapfit.mechanisms import Combination
-from gapfit.scales import MINUS, ReadingScale, first_of, plain_number, value_with_interval
+from gapfit.rounding import round_limit, round_value
+from gapfit.scales import MINUS, ReadingScale, first_of, plain_number
 from gapfit.series import TemperatureSeries
 from gapfit.style import BAND_68, BAND_95, BLACK, BLUE, GREY, PART_LOOK, RIGHT_MM, Axes, Figure, size_mm
 
@@ -223,7 +224,8 @@ def draw_readings(axes: Axes, groups: list[Readings], against: Against) -> None:
     for group in groups:
         size = against.weight(group.temperature)
         shown = np.isfinite(group.value)
-        label = fill(group.label, LEGEND_LETTERS, subsequent_indent="  ")
+        label = fill(group.label, LEGEND_LETTERS)
+        _draw_missing(axes, group, against.x(group.temperature[~shown]))
         axes.errorbar(
             against.x(group.temperature[shown]),
             (group.value * size)[shown],
@@ -232,6 +234,12 @@ def draw_readings(axes: Axes, groups: list[Readings], against: Against) -> None:
             zorder=4,
             **group.look,
         )
+
+
+def _draw_missing(axes: Axes, group: Readings, x: FloatArray) -> None:
+    """Points without a reading: their marker on the lower edge, at their temperature."""
+    look = {"markersize": 4.2, "linestyle": "none", "clip_on": False, "zorder": 6}
+    axes.plot(x, 0 * x, transform=axes.get_xaxis_transform(), marker=group.marker, color=BLACK, **look)
 
 
 def draw_band(axes: Axes, curves: PosteriorCurves, against: Against) -> None:
@@ -276,10 +284,8 @@ def draw_line(axes: Axes, fit: GapFit, scale: ReadingScale) -> None:
     margin = 0.12 * float(np.ptp(inverse))
     inverse = np.linspace(max(inverse[0] - margin, 1e-6), inverse[-1] + margin, 60)
     y = line.prefactor * np.exp(-line.gap_K / 2 * inverse) / scale.unit.size
-    label = (
-        f"{LINE}, {plain_number(round(line.low_K, 3))}–{plain_number(round(line.high_K, 3))} K:\n"
-        f"{value_with_interval(line.gap_K, line.gap_K - line.gap_error_K, line.gap_K + line.gap_error_K)} K"
-    )
+    window = f"{plain_number(round(line.low_K, 3))}–{plain_number(round(line.high_K, 3))} K"
+    label = f"{LINE}, {window}:\n{round_value(line.gap_K, line.gap_error_K).text} K"
     axes.plot(inverse, y, color=GREY, linewidth=0.7, linestyle=(0, (3, 3)), zorder=1.5, label=label)
 
 
@@ -324,11 +330,12 @@ def answer(fit: GapFit) -> str:
     record = fit.verdict_record
     if fit.gap.draws.size and fit.verdict not in ("no activated regime", "insulating"):
         interval = fit.gap.interval(0.68)
-        return f"gap {value_with_interval(fit.gap.median, interval.low, interval.high)} K (68 %)"
+        above, below = interval.high - fit.gap.median, fit.gap.median - interval.low
+        return f"gap {round_value(fit.gap.median, above, below).text} K (68 %)"
     if np.isfinite(record.gap_lower95_K):
-        return f"gap, if any, > {record.gap_lower95_K:.2g} K (95 %)"
+        return f"gap, if any, {round_limit('>', record.gap_lower95_K).text} K (95 %)"
     if np.isfinite(record.gap_upper95_K):
-        return f"gap, if any, < {record.gap_upper95_K:.2g} K (95 %)"
+        return f"gap, if any, {round_limit('<', record.gap_upper95_K).text} K (95 %)"
     return "no gap to be read"
 
 

@@ -12,11 +12,14 @@ from matplotlib.ticker import FixedFormatter, FixedLocator, NullLocator
 from numpy.typing import ArrayLike, NDArray
 
 from gapfit.series import TemperatureSeries
-from gapfit.style import Axes
+from gapfit.style import GREY, Axes
 
 __all__ = [
+    "MARKS_MM",
+    "MINUS",
     "AxisUnit",
     "ReadingScale",
+    "filling_marks",
     "logarithmic_ticks",
     "nice_temperatures",
     "plain_number",
@@ -24,13 +27,17 @@ __all__ = [
     "reading_unit",
     "set_ticks",
     "symbol_of",
+    "temperature_axis",
     "temperature_ticks_above",
-    "value_with_interval",
 ]
 
 FloatArray = NDArray[np.float64]
 _PREFIXES = {-15: "f", -12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}
 _STEPS = (1.0, 2.0, 5.0)
+POINTS_PER_MM = 72 / 25.4
+MARKS_MM = 6.2
+"""Room that `filling_marks` takes above axes, mm."""
+
 MINUS = "\N{MINUS SIGN}"
 NOT_SEEN = 2.0
 """A reading below this many standard errors calls for an axis that is linear near zero."""
@@ -133,26 +140,24 @@ class ReadingScale:
         return f"linear scale below {plain_number(self.linear_below)} {self.unit.name}"
 
 
-def reading_scale(series: TemperatureSeries, factor: ArrayLike = 1.0) -> ReadingScale:
-    """Axis for the readings of a series, excluded ones included.
+def reading_scale(series: TemperatureSeries, power: float = 0.0) -> ReadingScale:
+    """Axis for the readings of a series times T^power, excluded ones included.
 
     Parameters
     ----------
     series : TemperatureSeries
-    factor : array_like[n_point]
-        Readings are multiplied by this before they are drawn.
+    power : float
 
     Returns
     -------
     ReadingScale
     """
-    weight = np.broadcast_to(np.asarray(factor, float), series.value.shape)
-    value, error = series.value * weight, series.error * weight
-    if np.ndim(factor) == 0:
-        value = np.append(value, [point.value for point in series.excluded])
-        error = np.append(error, [point.error for point in series.excluded])
-    known = np.isfinite(value) & np.isfinite(error)
-    value, error = value[known], error[known]
+    left_out = np.array([[p.temperature, p.value, p.error] for p in series.excluded], float).reshape(-1, 3)
+    used = np.column_stack([series.temperature, series.value, series.error])
+    temperature, value, error = np.concatenate([used, left_out]).T
+    known = np.isfinite(value)
+    weight = temperature[known] ** power
+    value, error = value[known] * weight, np.nan_to_num(error[known]) * weight
     unit = reading_unit(value, series.quantity)
     value, error = value / unit.size, error / unit.size
     faint = value <= NOT_SEEN * error
@@ -274,6 +279,90 @@ def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float) -> Non
         )  # fmt: skip
 
 
+def temperature_axis(axes: Axes, low: float, high: float, width_mm: float) -> None:
+    """Logarithmic x axis of temperature with plain numbers.
+
+    Parameters
+    ----------
+    axes : Axes
+    low, high : float, K
+        Ends.
+    width_mm : float, mm
+        Width of the axes, so that labels keep apart.
+    """
+    axes.set_xscale("log")
+    axes.set_xlim(low, high)
+    places: list[float] = []
+    closest = 6.0 / width_mm * np.log(high / low)
+    for value in nice_temperatures(low, high):
+        if all(abs(np.log(value / other)) > closest for other in places):
+            places.append(value)
+    major, minor = logarithmic_ticks(low, high)
+    rest = [tick for tick in (*major, *minor) if tick not in places]
+    set_ticks(axes, "x", sorted(places), [plain_number(value) for value in sorted(places)], rest)
+
+
+def spread_labels(wanted: Sequence[float], half_widths: Sequence[float], room: float) -> list[float]:
+    """Places of labels in one row, as near as can be to where they are wanted without touching.
+
+    Parameters
+    ----------
+    wanted : sequence of float, mm
+        Rising.
+    half_widths : sequence of float, mm
+        Half of the room that each label needs.
+    room : float, mm
+        Length of the row; where labels need more they stand evenly and overlap.
+
+    Returns
+    -------
+    list of float, mm
+    """
+    need = 2 * sum(half_widths)
+    shrink = min(1.0, room / need) if need else 1.0
+    half = [shrink * width for width in half_widths]
+    places = list(wanted)
+    for _ in range(200):
+        moved = 0.0
+        for k in range(len(places) - 1):
+            lack = half[k] + half[k + 1] - (places[k + 1] - places[k])
+            if lack > 1e-6:
+                places[k] -= lack / 2
+                places[k + 1] += lack / 2
+                moved = max(moved, lack)
+        inside = [min(max(at, 0.3 * h), room - 0.3 * h) for at, h in zip(places, half, strict=True)]
+        moved = max([moved, *(abs(a - b) for a, b in zip(inside, places, strict=True))])
+        places = inside
+        if moved < 1e-3:
+            break
+    return places
+
+
+def filling_marks(axes: Axes, places: Sequence[float], labels: Sequence[str], width_mm: float) -> None:
+    """Filling factors in a row above axes, with a line from each to its place on the axis.
+
+    Parameters
+    ----------
+    axes : Axes
+        With x limits set.
+    places : sequence of float
+        Rising.
+    labels : sequence of str
+    width_mm : float, mm
+        Width of the axes.
+    """
+    low, high = axes.get_xlim()
+    wanted = [(at - low) / (high - low) * width_mm for at in places]
+    spread = spread_labels(wanted, [0.72 * len(label) + 0.7 for label in labels], width_mm)
+    for at, shown, label in zip(wanted, spread, labels, strict=True):
+        line = {"arrowstyle": "-", "linewidth": 0.4, "color": GREY, "shrinkA": 0, "shrinkB": 0}
+        axes.annotate(
+            label.replace("-", MINUS), (at / width_mm, 1.0), ((shown - at) * POINTS_PER_MM, 2.6 * POINTS_PER_MM),
+            xycoords="axes fraction", textcoords="offset points", ha="center", va="bottom", arrowprops=line,
+            annotation_clip=False,
+        )  # fmt: skip
+
+
 # ----------------------------------------------------------------------------------------- numbers in print
 
 
@@ -286,26 +375,6 @@ def plain_number(value: float) -> str:
         head = "" if abs(abs(lead) - 1) < 1e-6 else rf"{abs(lead):g}\times "
         return rf"${'-' if value < 0 else ''}{head}10^{{{exponent}}}$"
     return f"{value:.6g}".replace("-", MINUS)
-
-
-def value_with_interval(median: float, low: float, high: float) -> str:
-    """Median with its distances to the ends of an interval, two digits of the smaller one.
-
-    Parameters
-    ----------
-    median, low, high : float
-
-    Returns
-    -------
-    str
-        ``"6.18 ± 0.05"``, or ``"6.18 +0.09 −0.05"`` where the distances differ by more than a fifth.
-    """
-    up, down = high - median, median - low
-    smaller = min([step for step in (up, down) if step > 0], default=abs(median) or 1.0)
-    digits = max(0, 1 - int(np.floor(np.log10(smaller))))
-    if abs(up - down) <= 0.2 * max(up, down):
-        return f"{median:.{digits}f} ± {(up + down) / 2:.{digits}f}".replace("-", MINUS)
-    return f"{median:.{digits}f} +{up:.{digits}f} -{down:.{digits}f}".replace("-", MINUS)
 
 
 def first_of(values: Iterable[Any]) -> list[Any]:

@@ -27,6 +27,7 @@ from numpy.typing import ArrayLike, NDArray
 __all__ = [
     "ONE_COLUMN_MM",
     "PART_LOOK",
+    "SERIES_LOOK",
     "TWO_COLUMNS_MM",
     "Axes",
     "Figure",
@@ -35,7 +36,7 @@ __all__ = [
     "legend_below",
     "new_figure",
     "place",
-    "reading_map",
+    "plane_map",
     "save_figure",
     "set_height",
     "size_mm",
@@ -69,6 +70,18 @@ PART_LOOK: dict[str, dict[str, Any]] = {
     "constant": {"color": "#4d4d4d", "linestyle": (0, (7, 1.5, 1, 1.5, 1, 1.5))},
 }
 """Colour and line style of each contribution to a curve."""
+
+_COLOURS = ("#0b5fa5", "#b34700", "#00785a", "#8a3d7a", "#000000", "#c08a00", "#4a90c2", "#767676")
+SERIES_LOOK: tuple[dict[str, Any], ...] = tuple(
+    {"marker": marker, "color": colour, "linestyle": line, "linewidth": 0.7, "markerfacecolor": "white"}
+    for marker, colour, line in zip(
+        "os^DvP<>XhdpH*8o",
+        _COLOURS * 2,
+        ("-", (0, (5, 1.5)), (0, (1, 1.2)), (0, (4, 1.2, 1, 1.2))) * 4,
+        strict=True,
+    )
+)
+"""Marker, colour and line style of several series in one panel."""
 
 _OWN = {
     "font.family": "sans-serif",
@@ -273,9 +286,9 @@ def temperature_colours(temperature: ArrayLike) -> FloatArray:
     return np.asarray(temperature_map()((height - height.min()) / span if span > 0 else 0 * height))
 
 
-def reading_map(name: str) -> Any:
+def plane_map(name: str) -> Any:
     """Colour map of a quantity over a plane: ``"gap"`` or ``"weight"``, both of monotone lightness."""
-    return matplotlib.colormaps[{"gap": "cividis", "weight": "Greys"}[name]]
+    return matplotlib.colormaps[{"gap": "cividis", "weight": "YlGnBu"}[name]]
 
 
 # ------------------------------------------------------------------------------------------------- ways out
