@@ -21,8 +21,8 @@ from gapfit.curve import Reference, log_prefactor
 from gapfit.diagnostics import Diagnostics
 from gapfit.errors import FileError
 from gapfit.fit import FitSettings, GapFit
-from gapfit.mechanisms import PARAMETERS, Combination
-from gapfit.posterior import STUDENT_DEGREES, Problem, Windows
+from gapfit.mechanisms import PARAMETERS, SLOT, Combination
+from gapfit.posterior import STUDENT_DEGREES, STUDENT_SCALE, Problem, Windows
 from gapfit.priors import Prior
 from gapfit.series import ExcludedPoint, TemperatureSeries
 from gapfit.storage import FORMAT_VERSION, atomic_path, write_bytes
@@ -161,7 +161,7 @@ def _posterior_group(fit: GapFit) -> dict[str, Content]:
         "combination": _chain(
             draws.combination.astype("i4"), "", "index into constant_data/combination_name"
         ),
-        "activated": _chain(draws.activated.astype("i4"), "", "1 where the draw has an activated regime"),
+        "in_regime": _chain(draws.activated.astype("i4"), "", "1 where the draw has an activated regime"),
         "window_low_K": _chain(temperature[windows.low[draws.window]], "K", "lowest temperature kept"),
         "window_high_K": _chain(temperature[windows.high[draws.window] - 1], "K", "highest temperature kept"),
         "scale": _chain(fit.scale, "", "thermometer scale and model floor, a factor of the gap"),
@@ -189,13 +189,18 @@ def _member_weights(fit: GapFit) -> FloatArray:
 
 
 def _point_log_likelihood(fit: GapFit) -> FloatArray:
-    """Log density of every reading, ndarray[n_draw, n_point]; the fit itself leaves constants out."""
-    constant = -0.5 * np.log(2 * np.pi)
-    if fit.problem.student:
-        degrees = STUDENT_DEGREES
-        constant = gammaln((degrees + 1) / 2) - gammaln(degrees / 2) - 0.5 * np.log(degrees * np.pi)
-    terms = fit.problem.point_terms(fit.draws.coordinates)
-    return np.asarray(terms + constant - np.log(fit.series.error))
+    """Log density of every reading with all constants, ndarray[n_draw, n_point]."""
+    series, coordinates = fit.series, fit.draws.coordinates
+    curve = fit.problem.curve(coordinates)
+    stated = np.exp(coordinates[:, SLOT["inflation"], None]) * series.error
+    sigma = np.hypot(stated, curve.slope * series.temperature_error / series.temperature)
+    residual = (series.value - curve.total) / sigma
+    if not fit.problem.student:
+        return np.asarray(-(residual**2) / 2 - 0.5 * np.log(2 * np.pi) - np.log(sigma))
+    degrees = STUDENT_DEGREES
+    constant = gammaln((degrees + 1) / 2) - gammaln(degrees / 2) - 0.5 * np.log(degrees * np.pi)
+    fall = (degrees + 1) / 2 * np.log1p((residual / STUDENT_SCALE) ** 2 / degrees)
+    return np.asarray(constant - fall - np.log(STUDENT_SCALE * sigma))
 
 
 # ------------------------------------------------------------------------------------- fits to be taken up
