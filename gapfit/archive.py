@@ -224,10 +224,16 @@ def fit_fingerprint(series: TemperatureSeries, settings: FitSettings) -> str:
     record = {
         "version": __version__,
         "format": FORMAT_VERSION,
+        "parameters": _parameter_names(),
         "series": {name: _exact(value) for name, value in asdict(series).items()},
         "settings": asdict(settings),
     }
     return hashlib.sha256(json.dumps(record, sort_keys=True).encode()).hexdigest()[:32]
+
+
+def _parameter_names() -> list[str]:
+    """What the coordinates of a draw are, in order."""
+    return [parameter.name for parameter in PARAMETERS]
 
 
 def _exact(value: Any) -> Any:
@@ -272,6 +278,7 @@ def _record(fit: GapFit) -> dict[str, Any]:
     }
     return {
         "format_version": FORMAT_VERSION,
+        "parameters": _parameter_names(),
         "series": series,
         "settings": asdict(fit.settings),
         "reference": asdict(fit.problem.reference),
@@ -305,11 +312,8 @@ def load_fit(path: str | Path) -> GapFit:
         with np.load(path, allow_pickle=False) as archive:
             arrays = {name: archive[name] for name in archive.files}
         record = json.loads(str(arrays.pop("record")))
-        if record["format_version"] != FORMAT_VERSION:
-            raise FileError(
-                f"has layout version {record['format_version']}, this is {FORMAT_VERSION}; fit again",
-                file=path,
-            )
+        if (record["format_version"], record["parameters"]) != (FORMAT_VERSION, _parameter_names()):
+            raise FileError("was stored by another version of gapfit; fit again", file=path)
         return _rebuilt(record, arrays)
     except (OSError, ValueError, KeyError, TypeError, EOFError, zipfile.BadZipFile) as error:
         raise FileError(

@@ -22,6 +22,7 @@ import numpy as np
 from gapfit.errors import FileError
 from gapfit.fit import GapFit
 from gapfit.hall import filling_label
+from gapfit.readoff import series_to_columns
 from gapfit.series import TemperatureSeries
 
 __all__ = [
@@ -31,7 +32,6 @@ __all__ = [
     "plain",
     "read_json",
     "run_record",
-    "series_columns",
     "series_names",
     "write_bytes",
     "write_json",
@@ -250,63 +250,8 @@ def _current_name(series: TemperatureSeries) -> str:
 # -------------------------------------------------------------------------------------------- the readings
 
 
-def series_columns(series: Iterable[TemperatureSeries]) -> dict[str, list[Any]]:
-    """Readings of all series as columns, excluded ones with their reason; a valid ``[series]`` input.
-
-    Parameters
-    ----------
-    series : iterable of TemperatureSeries
-
-    Returns
-    -------
-    dict of str to list
-        Columns of equal length; the reading stands in ``rho_xx_ohm`` or ``sigma_xx_S``, and a column that no
-        series needs is left out.
-    """
-    rows = [row for item in series for row in _series_rows(item)]
-    names = dict.fromkeys(name for row in rows for name in row)
-    columns = {name: [row.get(name) for row in rows] for name in names}
-    optional = ("sample", "cooldown", "contacts", "direction", "drive_current_A")
-    return {
-        name: column
-        for name, column in columns.items()
-        if name not in optional or any(item not in ("", None) for item in column)
-    }
-
-
-def _series_rows(series: TemperatureSeries) -> list[dict[str, Any]]:
-    column = "rho_xx_ohm" if series.quantity == "rho_xx" else "sigma_xx_S"
-    frame = {
-        "filling": filling_label(series.filling),
-        "field_T": _known(series.field_T),
-        "sample": series.sample,
-        "cooldown": series.cooldown,
-        "contacts": series.contacts,
-        "direction": series.direction,
-        "drive_current_A": _known(series.drive_current_A),
-    }
-    used = np.stack([series.temperature, series.value, series.error, series.temperature_error], axis=1)
-    readings = [(t, y, s, dt, "") for t, y, s, dt in used.tolist()]
-    readings += [(gone.temperature, gone.value, gone.error, 0.0, gone.reason) for gone in series.excluded]
-    return [
-        {
-            **frame,
-            "temperature_K": temperature,
-            "temperature_error_K": temperature_error,
-            column: _known(value),
-            f"{column}_error": _known(error),
-            "excluded": reason,
-        }
-        for temperature, value, error, temperature_error, reason in readings
-    ]
-
-
-def _known(number: float) -> float | None:
-    return float(number) if math.isfinite(number) else None
-
-
 def write_series(path: str | Path, series: Iterable[TemperatureSeries]) -> Path:
-    """Write the readings as used to a CSV file that is a valid ``[series]`` input.
+    """Write the readings, those left out with their reason, to a CSV file that is a valid ``[series]`` input.
 
     Parameters
     ----------
@@ -319,7 +264,7 @@ def write_series(path: str | Path, series: Iterable[TemperatureSeries]) -> Path:
     """
     import pandas as pd
 
-    frame = pd.DataFrame(series_columns(series))
+    frame = pd.DataFrame(series_to_columns(tuple(series)))
     return write_text(path, frame.to_csv(index=False, lineterminator="\n"))
 
 

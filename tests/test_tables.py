@@ -37,8 +37,9 @@ def crafted(**changes: object) -> pd.DataFrame:
     """One row whose printed form can be worked out by hand."""
     frame = table().iloc[:1].copy()
     numbers = {
-        "gap_K": 5.931, "gap_low68_K": 5.82, "gap_high68_K": 6.14, "gap_low95_K": 5.7061, "gap_high95_K": 6.392,
-        "field_T": 12.9, "permittivity": 12.9, "flags": "", "verdict": "activated", "verdict_cause": "",
+        "gap_K": 5.931, "gap_low68_K": 5.82, "gap_high68_K": 6.14, "gap_low95_K": 5.7061,
+        "gap_high95_K": 6.392, "field_T": 12.9, "permittivity": 12.9, "flags": "",
+        "verdict": "activated", "verdict_cause": "",
     }  # fmt: skip
     for name, value in {**numbers, **changes}.items():
         frame[name] = value
@@ -72,7 +73,7 @@ def test_other_units_of_the_gap() -> None:
 
 def test_effective_field_and_sequences() -> None:
     frame = table()
-    # 1/3 is p = 1 of p/(2p+1) and of p/(4p-1); 2/5 is p = 2 of p/(2p+1); 2/3 is p = 2 of p/(2p-1): by definition
+    # by definition: 1/3 is p = 1 of p/(2p+1) and of p/(4p-1), 2/5 is p = 2 of p/(2p+1), 2/3 p = 2 of p/(2p-1)
     assert frame.effective_field_T.tolist() == pytest.approx([4.3, 2.15, -2.15])
     assert frame.sequence[0].split(";") == ["p/(2p+1)", "p/(4p-1)"]
     assert frame.sequence[1] == "p/(2p+1)"
