@@ -17,7 +17,7 @@ from gapfit.errors import InputError
 from gapfit.fit import GapFit
 from gapfit.hall import filling_label
 from gapfit.intervals import Marginal
-from gapfit.mechanisms import PARAMETERS, Parameter
+from gapfit.mechanisms import PARAMETERS, Parameter, parse_combination
 from gapfit.posterior import STUDENT_DEGREES
 from gapfit.rounding import Rounded, round_limit, round_number, round_value
 from gapfit.straight import StraightLine
@@ -35,19 +35,18 @@ MEMBERS_SHOWN = 6
 CAPTIONS = {
     "gaps": "Gaps of all fillings: posterior median with 68 % and 95 % intervals; limits as arrows.",
     "trend": "Gaps against effective field.",
-    "arrhenius_all": "Arrhenius plots of all fillings.",
+    "overview": "Arrhenius plots of all fillings.",
     "traces": "Traces at all temperatures, with the minima that were read.",
     "density": "Density by several routes.",
-    "widths": "Width of the minima against temperature.",
     "arrhenius": (
         "Readings against 1/T with the posterior median and the 68 % and 95 % band; open symbols lie outside "
         "the windows that carry weight; residuals below."
     ),
     "window_map": "Gap and weight of each temperature window, by its lower and upper cut.",
     "corner": "Posterior of the parameters of the likeliest combination.",
-    "local_slope": "Local slope of ln(reading) against 1/T; activation alone would be flat at half the gap.",
+    "local_slope": "Local gap, −2 d ln(reading)/d(1/T); activation alone would be flat at the gap.",
     "hopping": "ln(T × reading) against powers of T in which variable-range hopping is a straight line.",
-    "width": "Width of the minimum against temperature.",
+    "width": "Width of the minima against temperature.",
     "gap_across": "Gap across the minimum, against filling factor.",
 }
 """Captions of figures by name; a figure of another name is captioned with its name."""
@@ -247,10 +246,11 @@ def _rounded(row: Mapping[str, Any], name: str, level: int, factor: float = 1.0)
 
 def _numbers(fit: GapFit, row: Mapping[str, Any]) -> list[tuple[str, Markup | str]]:
     """Names and values of the numbers of a fit, missing ones left out."""
-    series, ratio = fit.series, "(e/q)²/h" if fit.series.quantity == "sigma_xx" else "(h/e²)/p²"
+    conducts = fit.series.quantity == "sigma_xx"
+    quantity, ratio = ("σxx", "(e/q)²/h") if conducts else ("ρxx", "(h/e²)/p²")
     span = f"{row['temperature_low_K']:.3g} to {row['temperature_high_K']:.3g} K"
     numbers: list[tuple[str, float | str]] = [
-        ("readings", f"{row['n_points']} of {series.quantity}, {span}; {row['n_negative']} below zero"),
+        ("readings", f"{row['n_points']} of {quantity}, {span}; {row['n_negative']} below zero"),
         ("gap in meV", row["gap_meV"]),
         (f"gap over Coulomb scale (ε = {row['permittivity']:g})", row["gap_over_coulomb"]),
         ("prefactor, kΩ", row["prefactor_ohm"] / 1e3),
@@ -337,7 +337,11 @@ def _combinations(fit: GapFit) -> list[tuple[str, str]]:
 def _members(fit: GapFit) -> list[tuple[str, str, str]]:
     rows = fit.weights.head(MEMBERS_SHOWN).to_dict("records")
     return [
-        (row["mechanism"], f"{row['window_low_K']:.3g} to {row['window_high_K']:.3g}", f"{row['weight']:.3f}")
+        (
+            parse_combination(row["mechanism"]).label,
+            f"{row['window_low_K']:.3g} to {row['window_high_K']:.3g}",
+            f"{row['weight']:.3f}",
+        )
         for row in rows
     ]
 

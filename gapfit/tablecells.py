@@ -238,7 +238,7 @@ def marked(rows: Sequence[Row]) -> tuple[list[str], list[tuple[str, str]]]:
     """
     notes = list(dict.fromkeys(note for row in rows for note in _row_notes(row)))
     mark_of = {note: _mark(index) for index, note in enumerate(notes)}
-    marks = [", ".join(mark_of[note] for note in _row_notes(row)) for row in rows]
+    marks = [", ".join(sorted(mark_of[note] for note in _row_notes(row))) for row in rows]
     return marks, [(mark, note) for note, mark in mark_of.items()]
 
 

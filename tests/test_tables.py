@@ -243,7 +243,7 @@ def test_limits_marks_and_shared_notes() -> None:
     assert "(a) no activated regime: no minimum" in text
     assert "(b) one-sided 95 % limit" in text
     assert text.count("not converged") == 1
-    assert "(d, c, e)" in text
+    assert "(c, d, e)" in text
     assert "(e) made up flag" in text
     upper = render_table(
         crafted(gap_K=NAN, gap_lower95_K=NAN, gap_upper95_K=2.01, verdict="no activated regime")
