@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
 from dataclasses import asdict, dataclass, replace
 from fractions import Fraction
 from math import floor, nan
@@ -13,7 +12,7 @@ import numpy as np
 from gapfit.fit import GapFit, fit_temperature_series
 from gapfit.hall import effective_field, filling_label, sequence_members
 from gapfit.intervals import Marginal
-from gapfit.mechanisms import PARAMETERS, Combination
+from gapfit.mechanisms import PARAMETERS, Combination, Parameter
 from gapfit.units import coulomb_scale, kelvin_to_mev
 
 __all__ = [
@@ -22,7 +21,9 @@ __all__ = [
     "GAP_COLUMNS",
     "TableContext",
     "WholeRange",
+    "decades_used",
     "details",
+    "fitted_parameters",
     "flag_words",
     "gap_row",
     "whole_range",
@@ -108,6 +109,7 @@ FLAG_WORDS = {
     "reading_matters": "readings at the exact filling, at the minimum and averaged differ beyond noise",
     "edge_of_sweep": "a sweep ends close to the filling",
     "one_field_direction": "one field direction only, not symmetrised",
+    "beside_exact_filling": "read beside the exact filling",
 }
 """Words for flags; a flag that is not listed is shown as it is."""
 
@@ -188,13 +190,13 @@ def _ohm(fit: GapFit) -> float:
     return 1.0 if fit.series.quantity == "rho_xx" else fit.series.hall_resistance_ohm**2
 
 
-def shown_gap(fit: GapFit) -> Marginal:
+def _shown_gap(fit: GapFit) -> Marginal:
     """Posterior of the gap where the verdict allows to print one, else empty."""
     return Marginal("gap", "K", np.empty(0)) if fit.verdict in WITHOUT_GAP else fit.gap
 
 
 def _gap_part(fit: GapFit, context: TableContext) -> dict[str, Any]:
-    gap, series, verdict = shown_gap(fit), fit.series, fit.verdict_record
+    gap, series, verdict = _shown_gap(fit), fit.series, fit.verdict_record
     inner, outer = gap.interval(0.68), gap.interval(0.95)
     prefactor = fit.prefactor.median if gap.draws.size else nan
     return {
@@ -253,7 +255,7 @@ def decades_used(fit: GapFit) -> float:
 def _mechanism_part(fit: GapFit) -> dict[str, Any]:
     best, share = fit.best
     low, high = fit.window
-    kind = likely_hopping(fit)
+    kind = _likely_hopping(fit)
     return {
         "mechanism": best.name,
         "p_mechanism": share,
@@ -268,7 +270,7 @@ def _mechanism_part(fit: GapFit) -> dict[str, Any]:
     }
 
 
-def likely_hopping(fit: GapFit) -> str:
+def _likely_hopping(fit: GapFit) -> str:
     """``"es"`` or ``"mott"``, whichever is likelier, if hopping of either kind is likely; else empty."""
     chances = {kind: fit.probability_of(kind) for kind in ("es", "mott")}
     return max(chances, key=lambda kind: chances[kind]) if sum(chances.values()) > LIKELY else ""
@@ -404,7 +406,7 @@ def _combination_rows(fit: GapFit) -> list[dict[str, Any]]:
     ]
 
 
-def fitted_parameters(fit: GapFit) -> Iterable[Any]:
+def fitted_parameters(fit: GapFit) -> list[Parameter]:
     """Rows of the parameter table that some draw has."""
     return [item for item in PARAMETERS if fit.marginal(item.name).draws.size]
 

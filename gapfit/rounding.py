@@ -1,9 +1,9 @@
-"""Numbers for the eye: values with errors, intervals and limits rounded by one rule, as text, HTML and LaTeX.
+"""Numbers for the eye: values with errors, intervals and limits, rounded by one rule, as text, HTML or LaTeX.
 
-The rule is that of the Particle Data Group (Review of Particle Physics, introduction, section 5.3 "Rounding"):
-if the three highest-order digits of the error lie between 100 and 354, two digits of it are kept; between 355
-and 949, one; between 950 and 999 it is rounded up to 1000 and two are kept. The value is given to the same
-place. Files keep raw numbers.
+The rule is that of the Particle Data Group (Review of Particle Physics, introduction, 5.3 "Rounding"): if the
+three highest-order digits of the error lie between 100 and 354, two digits of it are kept; between 355 and
+949, one; between 950 and 999 it is rounded up to 1000 and two are kept. The value is given to the same place.
+Files keep raw numbers.
 """
 
 from __future__ import annotations
@@ -237,7 +237,7 @@ def round_value(value: float, above: float, below: float | None = None) -> Round
     -------
     Rounded
         Empty if the value is NaN. The smaller error sets the place, so that neither is rounded away (common
-        practice, no source); an error of zero sets none, and a value with two of them is printed to six digits.
+        practice, no source); an error of zero sets none, a value with two of them is printed to six digits.
 
     Raises
     ------

@@ -30,7 +30,7 @@ from gapfit.tablecells import (
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["TableStyle", "escape_latex", "render_table", "write_tables"]
+__all__ = ["TableStyle", "escape_latex", "render_table", "subscripts", "write_tables"]
 
 ENERGY_COLUMNS = (
     "gap_K", "gap_low68_K", "gap_high68_K", "gap_low95_K", "gap_high95_K", "gap_lower95_K", "gap_upper95_K"
