@@ -31,6 +31,9 @@ SCAN_WIDTH = 0.003
 """Starting densities of field sweeps are scaled within the first so that minima fall on fillings within the
 second, both relative."""
 
+SCAN_SHIFT, SCAN_REACH = 0.15, 0.012
+"""For gate sweeps besides the scale the neutrality is moved within the first; both in filling factor."""
+
 HALL_FILLING = 12.0
 """The Hall slope is taken at fields below that of this filling factor."""
 
@@ -61,8 +64,7 @@ def estimate_density(family: TraceFamily, stated: float | None = None) -> Densit
     routes = [] if stated is None else [DensityRoute("stated", stated, float("nan"), 1)]
     start, found = _start(family, stated)
     routes += found
-    if family.kind == "field":
-        start = _scanned(family, start)
+    start = _scanned(family, start) if family.kind == "field" else _scanned_gate(family, start)
     for _ in range(2):
         anchors = _anchors(family, start)
         start = _refined(start, anchors)
@@ -177,6 +179,30 @@ def _scanned(family: TraceFamily, start: DensityEstimate) -> DensityEstimate:
     best = float(scales[int(np.argmax(score))])
     value = start.offset * best
     return replace(start, offset=value, covariance=((0.004 * value) ** 2, 0.0, 0.0))
+
+
+def _scanned_gate(family: TraceFamily, start: DensityEstimate) -> DensityEstimate:
+    """Starting calibration of a gate without plateaus, moved so that the minima fall on simple fillings."""
+    plateaus = {a.filling for sweep in coldest_sweeps(family) for a in plateau_anchors(sweep, start)}
+    dips = [(dip, sweep.mean_field) for sweep in coldest_sweeps(family) for dip in sweep_dips(sweep, start)]
+    if len(plateaus) > 2 or len(dips) < 4:
+        return start
+    unit = np.array([h / (e * field) for _, field in dips])
+    weight = np.array([dip.share for dip, _ in dips])
+    nominal = np.array([dip.place for dip, _ in dips])
+    targets = strong_fillings(-HIGHEST_TARGET, HIGHEST_TARGET)
+    simple = np.array([1 / Fraction(t).limit_denominator(9).denominator for t in targets])
+    scales = np.exp(np.linspace(-SCAN, SCAN, 61))
+    shifts = np.linspace(-SCAN_SHIFT, SCAN_SHIFT, 61)
+    score = np.zeros((scales.size, shifts.size))
+    for i, scale in enumerate(scales):
+        moved = nominal * scale + shifts[:, None] * unit / unit.max()
+        near = np.exp(-0.5 * ((moved[..., None] - targets) / SCAN_REACH) ** 2)
+        score[i] = np.sum(weight[:, None] * simple * near, axis=(1, 2))
+    score *= np.exp(-0.5 * (np.log(scales)[:, None] / SCAN) ** 2 - 0.5 * (shifts / SCAN_SHIFT) ** 2)
+    row, column = np.unravel_index(int(np.argmax(score)), score.shape)
+    scale, shift = float(scales[row]), float(shifts[column]) / float(unit.max())
+    return replace(start, slope=start.slope * scale, offset=start.offset * scale + shift)
 
 
 def _anchors(family: TraceFamily, estimate: DensityEstimate) -> list[Anchor]:

@@ -80,7 +80,7 @@ class Dip:
     @property
     def flat(self) -> bool:
         """Whether it goes down to nearly nothing, so that its lowest point says little about its centre."""
-        return self.share > FLAT_SHARE or self.at_edge
+        return self.share > FLAT_SHARE
 
     @property
     def place(self) -> float:
@@ -154,7 +154,7 @@ def find_dips(curve: Curve, logarithmic: bool, significance: float = 5.0, share:
         if valley is None or valley.depth < share * max(valley.shoulder, 0.2 * usual):
             continue
         dip = _dip(curve, valley, logarithmic)
-        if dip.at_edge and dip.share < FLAT_SHARE:
+        if dip.at_edge and not dip.flat and not valley.turns:
             continue
         twin = next((other for other in found if other.low <= dip.filling <= other.high), None)
         if twin is None:
@@ -166,7 +166,10 @@ def find_dips(curve: Curve, logarithmic: bool, significance: float = 5.0, share:
 
 @dataclass(frozen=True)
 class _Valley:
-    """A minimum of a curve, by index: the lowest point, the two shoulders, and the half-way places."""
+    """A minimum of a curve, by index: the lowest point, the two shoulders, and the half-way places.
+
+    At the edge of the curve `turns` tells whether it rises again beyond noise.
+    """
 
     peak: int
     left: int
@@ -176,6 +179,7 @@ class _Valley:
     low: float
     high: float
     at_edge: bool
+    turns: bool
 
 
 def _shoulder(curve: Curve, peak: int, pace: int, significance: float) -> tuple[int, bool]:
@@ -205,7 +209,8 @@ def _valley(curve: Curve, peak: int, significance: float) -> _Valley | None:
     low = curve.axis[0] if cut[0] else _crossing(curve, peak, -1, level)
     high = curve.axis[-1] if cut[1] else _crossing(curve, peak, 1, level)
     shoulder = float(curve.value[peak]) + depth
-    return _Valley(peak, left, right, depth, abs(shoulder), float(low), float(high), bool(cut.any()))
+    turns = bool(np.all(rises > significance * curve.value_error[peak]))
+    return _Valley(peak, left, right, depth, abs(shoulder), float(low), float(high), bool(cut.any()), turns)
 
 
 def _crossing(curve: Curve, peak: int, pace: int, level: float) -> float:

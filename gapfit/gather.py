@@ -85,7 +85,7 @@ class Minimum:
         Averaged over the small window.
     half_width : float
         Half of the full width in filling factor at half depth, the depth counted from the lower shoulder;
-        NaN where there is no minimum.
+        NaN where there is no minimum, or the sweep ends before one of its sides.
     depth : float, ohm or S
         Depth below the lower shoulder; NaN where there is no minimum.
     rho_xy_ohm : float, ohm

@@ -209,7 +209,7 @@ def _minimum(
         minimum_filling=lowest_place,
         mean=mean.value,
         mean_error=float(np.sqrt(mean.error**2 + shift**2 + (floor * mean.value) ** 2)),
-        half_width=float("nan") if dip is None else dip.half_width,
+        half_width=float("nan") if dip is None or dip.at_edge else dip.half_width,
         depth=float("nan") if dip is None else dip.depth,
         rho_xy_ohm=_hall_at(piece, width),
         at_edge=exact.one_sided,

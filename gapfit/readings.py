@@ -22,6 +22,8 @@ from gapfit.traces import Sweep
 __all__ = [
     "Stretch",
     "Value",
+    "displacement_error",
+    "filling_error_at",
     "fitted_value",
     "mean_value",
     "noise_of",
@@ -36,10 +38,17 @@ WIDTHS = tuple(float(width) for width in np.geomspace(0.003, 0.04, 8))
 """Half-widths, relative to the filling, from which that of the local polynomial is chosen."""
 
 DEGREE = 2
+TOLERANCE, LARGEST_PULL = 5.0, 25.0
+"""Parabolas of two widths agree while the mean of their squared pulls over the temperatures exceeds one by no
+more than so many standard deviations, and none exceeds the second number."""
+
 LEAST_POINTS = 7
-NOISE_WIDTH = 0.006
-NOISE_POINTS = (10, 100)
-"""The noise is taken from points within this relative half-width, but from so many at least and at most."""
+NOISE_SIZES = (10, 16, 24, 36, 54, 80, 120, 180, 240)
+NOISE_WIDTH = 0.03
+SLOW_NOISE, NOISE_GROWTH = float(np.exp(-1 / 4)), 1.5
+"""The noise is taken from the residuals of so many points, within the relative half-width; the largest number
+is used up to which the residuals grow no faster than noise of such persistence would, by this factor: signal
+that the polynomial cannot follow grows faster (own choice)."""
 
 DENSEST = 800
 """Points of a stretch beyond which neighbours are averaged first."""
@@ -59,8 +68,6 @@ class Stretch:
         Hall resistivity there.
     unit : float
         Filling factor that a distance of one means.
-    residual : ndarray[n_near]
-        What a polynomial leaves of the signal near the place, for the noise.
     step : float
         Digit of the signal.
     inside : bool
@@ -72,7 +79,6 @@ class Stretch:
     temperature: FloatArray
     hall: FloatArray | None
     unit: float
-    residual: FloatArray
     step: float
     inside: bool
 
@@ -120,7 +126,7 @@ def stretch(sweep: Sweep, filling: FloatArray, place: float) -> Stretch:
     unit = max(abs(place), 1 / 3)
     distance = (filling - place) / unit
     nearest = int(np.argmin(np.abs(distance)))
-    reach = max(WIDTHS[-1], float(np.sort(np.abs(distance))[min(NOISE_POINTS[0], distance.size - 1)]))
+    reach = max(WIDTHS[-1], float(np.sort(np.abs(distance))[min(NOISE_SIZES[0], distance.size - 1)]))
     rows = np.flatnonzero((np.abs(distance) <= reach) & (sweep.segment == sweep.segment[nearest]))
     near = distance[rows]
     bunch = max(1, rows.size // DENSEST)
@@ -133,7 +139,6 @@ def stretch(sweep: Sweep, filling: FloatArray, place: float) -> Stretch:
         temperature=columns[2],
         hall=columns[3] if len(columns) > 3 else None,
         unit=unit,
-        residual=_residual(columns[0], columns[1]),
         step=sweep.step,
         inside=bool(near.size and near.min() <= 0 <= near.max()),
     )
@@ -147,22 +152,52 @@ def _bunched(column: FloatArray, bunch: int) -> FloatArray:
     return np.asarray(column[:size].reshape(-1, bunch).mean(axis=1))
 
 
-def _residual(distance: FloatArray, signal: FloatArray) -> FloatArray:
-    """What a polynomial leaves of the points nearest to the place."""
-    low, high = NOISE_POINTS
-    size = int(np.clip(np.sum(np.abs(distance) <= NOISE_WIDTH), low, high))
-    rows = np.sort(np.argsort(np.abs(distance), kind="stable")[:size])
-    degree = _noise_degree(rows.size)
-    if rows.size <= degree + 2:
-        return np.zeros(rows.size)
-    place = distance[rows] - distance[rows].mean()
-    basis, _ = np.linalg.qr(np.vander(place / np.abs(place).max(), degree + 1))
-    return np.asarray(signal[rows] - basis @ (basis.T @ signal[rows]))
-
-
 def _noise_degree(size: int) -> int:
     """Degree of the polynomial that is taken off before the noise is judged."""
     return 5 if size >= 20 else 3
+
+
+def _residual(piece: Stretch, size: int) -> FloatArray:
+    """What a polynomial leaves of the points nearest to the place."""
+    rows = np.sort(np.argsort(np.abs(piece.distance), kind="stable")[:size])
+    degree = _noise_degree(size)
+    if rows.size <= degree + 2:
+        return np.zeros(rows.size)
+    distance = piece.distance[rows] - piece.distance[rows].mean()
+    basis, _ = np.linalg.qr(np.vander(distance / np.abs(distance).max(), degree + 1))
+    return np.asarray(piece.signal[rows] - basis @ (basis.T @ piece.signal[rows]))
+
+
+def _noise_residuals(stretches: Sequence[Stretch]) -> tuple[list[FloatArray], int]:
+    """Residuals of the largest number of points that shows noise and no signal, and the degree taken off."""
+    room = [int(np.sum(np.abs(piece.distance) <= NOISE_WIDTH)) for piece in stretches]
+    most = max(NOISE_SIZES[0], int(np.median(room)))
+    best = [_residual(piece, NOISE_SIZES[0]) for piece in stretches]
+    degree = _noise_degree(NOISE_SIZES[0])
+    power = _white_powers(best, degree)
+    for size in NOISE_SIZES[1:]:
+        if size > most:
+            break
+        wider = [_residual(piece, size) for piece in stretches]
+        grown = _white_powers(wider, _noise_degree(size))
+        known = power > 0
+        limit = NOISE_GROWTH * _slow_power(size) / _slow_power(len(best[0]))
+        if known.any() and np.median(grown[known] / power[known]) > limit:
+            break
+        best, power, degree = wider, grown, _noise_degree(size)
+    return best, degree
+
+
+def _white_powers(residuals: Sequence[FloatArray], degree: int) -> FloatArray:
+    """Variance of the noise behind some residuals if it were white."""
+    return np.array([float(r @ r) / max(r.size - degree - 1, 1) for r in residuals])
+
+
+def _slow_power(size: int) -> float:
+    """`_white_powers` expected of slow noise of unit variance."""
+    degree = _noise_degree(size)
+    slow = noise_amplitude(1.0, size, degree, Noise(1.0, SLOW_NOISE))
+    return size / (slow**2 * max(size - degree - 1, 1))
 
 
 def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
@@ -181,8 +216,9 @@ def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
     -------
     list of Noise
     """
-    covariances = np.array([residual_covariance(piece.residual) for piece in stretches])
-    sizes = np.array([piece.residual.size for piece in stretches])
+    residuals, degree = _noise_residuals(stretches)
+    covariances = np.array([residual_covariance(residual) for residual in residuals])
+    sizes = np.array([residual.size for residual in residuals])
     power = covariances[:, :1]
     normal = np.divide(covariances, power, out=np.zeros_like(covariances), where=power > 0)
     normal *= sizes[:, None]
@@ -190,11 +226,9 @@ def noise_of(stretches: Sequence[Stretch], reach: int = 4) -> list[Noise]:
     smooth = (padded[:-2] + 2 * padded[1:-1] + padded[2:]) / 4
     found = []
     for index, piece in enumerate(stretches):
-        degree = _noise_degree(int(sizes[index]))
-        near = np.arange(max(0, index - reach), min(index + reach + 1, len(stretches)))
-        near = near[[_noise_degree(int(size)) == degree for size in sizes[near]]]
+        near = slice(max(0, index - reach), index + reach + 1)
         mean = normal[near].sum(axis=0) / max(float(sizes[near].sum()), 1.0)
-        noise = fit_noise(mean, int(np.median(sizes[near])), degree)
+        noise = fit_noise(mean, int(np.median(sizes[near])), degree, sizes[near].size)
         amplitude = 0.0
         if sizes[index] > degree + 2:
             amplitude = noise_amplitude(float(smooth[index]), int(sizes[index]), degree, noise)
@@ -291,27 +325,32 @@ def usable_width(stretches: Sequence[Stretch], noises: Sequence[Noise]) -> float
     Returns
     -------
     float
-        Half-width in units of the stretches. The difference of two nested unbiased estimates has the
-        difference of their variances; the widest window that passes is used (the idea of Lepski, 1991).
+        Half-width in units of the stretches; the idea is that of Lepski (1991). The window next to the
+        widest one that passes is used, to stay clear of its bias.
     """
-    found = [
-        [fitted_value(piece, noise, width) for piece, noise in zip(stretches, noises, strict=True)]
-        for width in WIDTHS
-    ]
-    value = np.array([[one.value for one in row] for row in found])
-    variance = np.array([[one.error**2 for one in row] for row in found])
+    pulls = np.array([_pulls(piece, noise) for piece, noise in zip(stretches, noises, strict=True)])
+    limit = 1 + TOLERANCE * np.sqrt(2 / len(stretches))
     best = 0
     for wide in range(1, len(WIDTHS)):
-        excess = np.maximum(variance[:wide] - variance[wide], 0.05 * variance[:wide])
-        pull = (value[:wide] - value[wide]) ** 2 / excess
-        usual = np.mean(pull, axis=1) <= 1 + 2 * np.sqrt(2 / value.shape[1])
-        if not (usual.all() and pull.max() < LARGEST_PULL):
+        own = pulls[:, :wide, wide]
+        if np.mean(own, axis=0).max() > limit or own.max() > LARGEST_PULL:
             break
         best = wide
-    return WIDTHS[best]
+    return WIDTHS[max(best - 1, 0)]
 
 
-LARGEST_PULL = 12.0
+def _pulls(piece: Stretch, noise: Noise) -> FloatArray:
+    """Squared differences between the parabolas of all widths, over their variances."""
+    weights = np.zeros((len(WIDTHS), piece.distance.size))
+    for index, width in enumerate(WIDTHS):
+        rows = _window(piece, width)
+        if rows.size >= LEAST_POINTS:
+            distance = piece.distance[rows] / float(np.abs(piece.distance[rows]).max())
+            weights[index, rows] = polynomial_operator(distance, DEGREE)[0]
+    difference = weights[:, None] - weights
+    variance = variance_factor(difference, noise) * noise.amplitude**2
+    squared = (difference @ piece.signal) ** 2
+    return np.divide(squared, variance, out=np.zeros_like(squared), where=variance > 0)
 
 
 def temperature_at(piece: Stretch, width: float) -> tuple[float, float]:

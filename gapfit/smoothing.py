@@ -33,6 +33,8 @@ PERSISTENCE = tuple(float(np.exp(-1 / time)) for time in np.geomspace(0.7, 60, 2
 SLOWEST = 0.6
 """Correlation times beyond this share of the samples per fitted coefficient cannot be told from signal."""
 LAGS = 12
+SIGNIFICANT = 6.0
+"""White noise is given up for a misfit lower by so many variances of a correlation."""
 
 
 @dataclass(frozen=True)
@@ -136,7 +138,7 @@ def _expected(size: int, degree: int, persistence: float) -> FloatArray:
     return np.array([np.trace(residual, offset=lag) / size if lag < size else 0.0 for lag in range(LAGS)])
 
 
-def fit_noise(covariance: FloatArray, size: int, degree: int) -> Noise:
+def fit_noise(covariance: FloatArray, size: int, degree: int, n_window: int = 1) -> Noise:
     """Correlation of the noise from the residuals of polynomial fits.
 
     Parameters
@@ -147,26 +149,37 @@ def fit_noise(covariance: FloatArray, size: int, degree: int) -> Noise:
         Points of a window.
     degree : int
         Degree of the polynomial that was fitted in each window.
+    n_window : int
+        Windows that were averaged.
 
     Returns
     -------
     Noise
+        White unless correlation describes the residuals better beyond chance.
     """
+    size = _rounded(size)
     lags = min(LAGS, size)
     target = covariance[:lags]
     if not target[0] > 0:
         return Noise()
     white = _expected(size, degree, 0.0)[:lags]
-    best, found = np.inf, Noise()
+    best = float(np.sum((target - white * (white @ target) / (white @ white)) ** 2))
+    best -= SIGNIFICANT * target[0] ** 2 / (size * n_window)
+    found = Noise()
     slowest = np.exp(-(degree + 1) / (SLOWEST * size))
     for persistence in (value for value in PERSISTENCE if value <= slowest):
         chained = _expected(size, degree, persistence)[:lags]
         parts = _two_parts(white, chained, target)
         misfit = float(np.sum((target - parts[0] * white - parts[1] * chained) ** 2))
         if misfit < best:
-            best, total = misfit, parts[0] + parts[1]
-            found = Noise(parts[1] / total, persistence) if parts[1] > 0 else Noise()
+            best = misfit
+            found = Noise(parts[1] / (parts[0] + parts[1]), persistence)
     return found
+
+
+def _rounded(size: int) -> int:
+    """Size to which expectations are computed: they change slowly."""
+    return size if size <= 64 else 4 * round(size / 4)
 
 
 def _two_parts(one: FloatArray, two: FloatArray, target: FloatArray) -> tuple[float, float]:
@@ -199,6 +212,7 @@ def noise_amplitude(residual_square: float, size: int, degree: int, noise: Noise
     float
         In the unit of the residuals.
     """
+    size = _rounded(size)
     expected = (1 - noise.share) * _expected(size, degree, 0.0)[0]
     if noise.share > 0:
         expected += noise.share * _expected(size, degree, noise.persistence)[0]
