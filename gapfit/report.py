@@ -230,6 +230,8 @@ def _answer(row: Mapping[str, Any], style: TableStyle) -> Markup:
     if not isnan(row["gap_K"] * factor):
         gap = _rounded(row, "gap", 95, factor)
         return Markup("{} = {} {} (median, 95 %)").format(symbol, Markup(gap.html), Markup(unit))
+    if isnan(factor):
+        return Markup("no gap in units of the Coulomb scale, since permittivity or field is unknown")
     lower = round_limit(">", row["gap_lower95_K"] * factor)
     if lower.value:
         return Markup("{} {} {} (95 %), should there be a gap").format(
@@ -391,7 +393,7 @@ def _methods(fits: Sequence[GapFit]) -> dict[str, Any]:
         "largest_pareto_k": LARGEST_PARETO_K,
         "certain": CERTAIN,
         "predictive_p": SMALLEST_PREDICTIVE_P,
-        "parameters": [item for item in PARAMETERS if item.name != "hopping_exponent"],
+        "saturates": any(item.name == "saturation" for item in PARAMETERS),
     }
 
 

@@ -149,6 +149,14 @@ def test_not_converged_is_said_at_the_top() -> None:
     assert "R-hat 1.2 is large" in page
 
 
+def test_unit_that_cannot_be_had_is_said() -> None:
+    frame = table()
+    frame["permittivity"] = float("nan")
+    page = render_report(content(unit="coulomb", table=frame))
+    assert page.count("permittivity or field is unknown") == 3
+    assert "in units of the Coulomb scale" in render_report(content(unit="coulomb"))
+
+
 def test_empty_report_says_so() -> None:
     page = render_report(content(fits=[], table=table().iloc[:0], alone=(), provenance={}))
     assert "No series could be fitted" in page
