@@ -44,7 +44,7 @@ from gapfit.style import (
     styled,
 )
 
-__all__ = ["arrhenius_figure"]
+__all__ = ["Span", "arrhenius_figure", "inverse_temperature_spans"]
 
 FloatArray = NDArray[np.float64]
 LARGEST_RESIDUAL = 5.0
@@ -56,8 +56,14 @@ BREAK_GAP_MM = 1.6
 
 
 @dataclass(frozen=True)
-class _Span:
-    """Part of the 1/T axis and its place on the page."""
+class Span:
+    """Part of the 1/T axis and its place on the page.
+
+    Attributes
+    ----------
+    low, high : float, 1/K
+    left_mm, width_mm : float, mm
+    """
 
     low: float
     high: float
@@ -65,8 +71,19 @@ class _Span:
     width_mm: float
 
 
-def _spans(series: TemperatureSeries, width_mm: float) -> list[_Span]:
-    """One stretch of 1/T, or two where most readings would huddle in the first quarter of one."""
+def inverse_temperature_spans(series: TemperatureSeries, width_mm: float) -> list[Span]:
+    """One stretch of 1/T, or two where most readings would huddle in the first quarter of one.
+
+    Parameters
+    ----------
+    series : TemperatureSeries
+    width_mm : float, mm
+        Width of the figure.
+
+    Returns
+    -------
+    list of Span
+    """
     temperatures = np.append(series.temperature, [point.temperature for point in series.excluded])
     inverse = np.sort(1 / temperatures)
     room = width_mm - LEFT_MM - RIGHT_MM
@@ -74,15 +91,15 @@ def _spans(series: TemperatureSeries, width_mm: float) -> list[_Span]:
     pad = 0.04 * (high - low)
     huddled = np.median(inverse) - low < 0.25 * (high - low)
     if inverse.size < BREAK_FEWEST or not huddled:
-        return [_Span(max(low - pad, 0.0), high + pad, LEFT_MM, room)]
+        return [Span(max(low - pad, 0.0), high + pad, LEFT_MM, room)]
     index = int(np.ceil(0.68 * inverse.size))
     cut, start = inverse[index - 1], inverse[index]
     first, second = 0.66 * room, 0.34 * room - BREAK_GAP_MM
     near, far = 0.06 * (cut - low), 0.1 * (high - start)
     stop, restart = cut + min(near, 0.4 * (start - cut)), start - min(far, 0.4 * (start - cut))
     return [
-        _Span(max(low - near, 0.0), float(stop), LEFT_MM, first),
-        _Span(float(restart), high + far, LEFT_MM + first + BREAK_GAP_MM, second),
+        Span(max(low - near, 0.0), float(stop), LEFT_MM, first),
+        Span(float(restart), high + far, LEFT_MM + first + BREAK_GAP_MM, second),
     ]
 
 
@@ -117,7 +134,11 @@ def arrhenius_figure(fit: GapFit, width_mm: float = ONE_COLUMN_MM) -> Figure:
     negative readings stand where they are. The axis of 1/T is broken where most readings would huddle.
     """
     series, groups = fit.series, readings_of(fit)
-    scale, curves, spans = reading_scale(series), posterior_curves(fit), _spans(series, width_mm)
+    scale, curves, spans = (
+        reading_scale(series),
+        posterior_curves(fit),
+        inverse_temperature_spans(series, width_mm),
+    )
     against, figure = Against(scale), new_figure(width_mm, 20.0)
     upper = [figure.add_subplot() for _ in spans]
     lower = [figure.add_subplot() for _ in spans]
@@ -139,7 +160,7 @@ def arrhenius_figure(fit: GapFit, width_mm: float = ONE_COLUMN_MM) -> Figure:
     return figure
 
 
-def _arrange(figure: Figure, upper: list[Axes], lower: list[Axes], spans: list[_Span], foot: float) -> None:
+def _arrange(figure: Figure, upper: list[Axes], lower: list[Axes], spans: list[Span], foot: float) -> None:
     main, residual, base = 56.0, 17.0, foot + 9.0
     top = base + residual + 1.2 + main
     set_height(figure, top + 20.5)

@@ -238,7 +238,7 @@ def window_map_figure(fit: GapFit, width_mm: float = TWO_COLUMNS_MM) -> Figure:
     Returns
     -------
     Figure
-        Windows with fewer than twenty activated draws are pale on the left, those without a draw on the right;
+        Windows with fewer than twenty activated draws are pale on the left, those without draws on the right;
         windows that are too short to be fitted are hatched; a ring marks the window of largest weight. The
         colours of the gap span its 95 % interval, so that even colours mean that the window does not matter.
     """

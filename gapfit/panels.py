@@ -29,6 +29,7 @@ __all__ = [
     "draw_line",
     "draw_parts",
     "draw_readings",
+    "has_gap",
     "head",
     "headline",
     "posterior_curves",
@@ -325,10 +326,15 @@ def headline(fit: GapFit, letters: int = 52) -> str:
     return words if len(words) <= letters else words[: letters - 1] + "…"
 
 
+def has_gap(fit: GapFit) -> bool:
+    """Whether there is a gap to be shown, resolved or not."""
+    return bool(fit.gap.draws.size) and fit.verdict not in ("no activated regime", "insulating")
+
+
 def answer(fit: GapFit) -> str:
     """Gap with its 68 % interval, or its limit, or that there is none."""
     record = fit.verdict_record
-    if fit.gap.draws.size and fit.verdict not in ("no activated regime", "insulating"):
+    if has_gap(fit):
         interval = fit.gap.interval(0.68)
         above, below = interval.high - fit.gap.median, fit.gap.median - interval.low
         return f"gap {round_value(fit.gap.median, above, below).text} K (68 %)"

@@ -52,6 +52,7 @@ from gapfit.style import (
     size_mm,
     styled,
 )
+from gapfit.surveys import gap_across_figure, gaps_figure, overview_figure
 
 __all__ = [
     "ONE_COLUMN_MM",
@@ -61,8 +62,11 @@ __all__ = [
     "corner_figure",
     "density_figure",
     "figure_svg",
+    "gap_across_figure",
+    "gaps_figure",
     "hopping_figure",
     "local_slope_figure",
+    "overview_figure",
     "save_figure",
     "traces_figure",
     "width_figure",

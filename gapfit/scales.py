@@ -140,13 +140,19 @@ class ReadingScale:
         return f"linear scale below {plain_number(self.linear_below)} {self.unit.name}"
 
 
-def reading_scale(series: TemperatureSeries, power: float = 0.0) -> ReadingScale:
+def reading_scale(
+    series: TemperatureSeries, power: float = 0.0, unit: AxisUnit | None = None, coldest: float = 0.0
+) -> ReadingScale:
     """Axis for the readings of a series times T^power, excluded ones included.
 
     Parameters
     ----------
     series : TemperatureSeries
     power : float
+    unit : AxisUnit, optional
+        The one that suits the readings otherwise.
+    coldest : float, K
+        Colder readings do not count.
 
     Returns
     -------
@@ -155,10 +161,10 @@ def reading_scale(series: TemperatureSeries, power: float = 0.0) -> ReadingScale
     left_out = np.array([[p.temperature, p.value, p.error] for p in series.excluded], float).reshape(-1, 3)
     used = np.column_stack([series.temperature, series.value, series.error])
     temperature, value, error = np.concatenate([used, left_out]).T
-    known = np.isfinite(value)
+    known = np.isfinite(value) & (temperature >= coldest)
     weight = temperature[known] ** power
     value, error = value[known] * weight, np.nan_to_num(error[known]) * weight
-    unit = reading_unit(value, series.quantity)
+    unit = reading_unit(value, series.quantity) if unit is None else unit
     value, error = value / unit.size, error / unit.size
     faint = value <= NOT_SEEN * error
     highest = float((value + error).max())
@@ -356,8 +362,9 @@ def filling_marks(axes: Axes, places: Sequence[float], labels: Sequence[str], wi
     spread = spread_labels(wanted, [0.72 * len(label) + 0.7 for label in labels], width_mm)
     for at, shown, label in zip(wanted, spread, labels, strict=True):
         line = {"arrowstyle": "-", "linewidth": 0.4, "color": GREY, "shrinkA": 0, "shrinkB": 0}
+        away = (shown - at) * POINTS_PER_MM, 2.6 * POINTS_PER_MM
         axes.annotate(
-            label.replace("-", MINUS), (at / width_mm, 1.0), ((shown - at) * POINTS_PER_MM, 2.6 * POINTS_PER_MM),
+            label.replace("-", MINUS), (at / width_mm, 1.0), away,
             xycoords="axes fraction", textcoords="offset points", ha="center", va="bottom", arrowprops=line,
             annotation_clip=False,
         )  # fmt: skip

@@ -22,13 +22,16 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import ListedColormap
 from matplotlib.figure import Figure
 from matplotlib.legend_handler import HandlerTuple
+from matplotlib.path import Path as Outline
 from numpy.typing import ArrayLike, NDArray
 
 __all__ = [
+    "LOWER_LIMIT",
     "ONE_COLUMN_MM",
     "PART_LOOK",
     "SERIES_LOOK",
     "TWO_COLUMNS_MM",
+    "UPPER_LIMIT",
     "Axes",
     "Figure",
     "figure_svg",
@@ -82,6 +85,16 @@ SERIES_LOOK: tuple[dict[str, Any], ...] = tuple(
     )
 )
 """Marker, colour and line style of several series in one panel."""
+
+_ARROW = np.array([(-0.4, 0.0), (0.4, 0.0), (0.0, 0.0), (0.0, 1.0), (-0.25, 0.65), (0.0, 1.0), (0.25, 0.65)])
+_MOVE, _LINE = Outline.MOVETO, Outline.LINETO
+_STROKES = [_MOVE, _LINE, _MOVE, _LINE, _MOVE, _LINE, _LINE]
+LOWER_LIMIT: dict[str, Any] = {
+    "marker": Outline(_ARROW, _STROKES), "markerfacecolor": "none", "markersize": 12.0,
+}  # fmt: skip
+"""Arrow from a limit to where the gap may be; that of an upper limit points down."""
+
+UPPER_LIMIT = LOWER_LIMIT | {"marker": Outline(_ARROW * [1.0, -1.0], _STROKES)}
 
 _OWN = {
     "font.family": "sans-serif",
