@@ -58,8 +58,6 @@ def estimate_density(family: TraceFamily, stated: float | None = None) -> Densit
     ------
     InputError
         If there is nothing to start from.
-    NotEnoughData
-        If no plateau or minimum fits any filling and there is no other route.
     """
     routes = [] if stated is None else [DensityRoute("stated", stated, float("nan"), 1)]
     start, found = _start(family, stated)
@@ -76,7 +74,7 @@ def estimate_density(family: TraceFamily, stated: float | None = None) -> Densit
         anchors=tuple(anchors),
         stated=float("nan") if given is None else given,
     )
-    return replace(done, notices=_notices(done, family))
+    return replace(done, notices=_notices(done))
 
 
 # --- starting values ------------------------------------------------------------------------------------
@@ -285,7 +283,7 @@ def _anchor_routes(estimate: DensityEstimate, anchors: Sequence[Anchor]) -> list
     return routes
 
 
-def _notices(estimate: DensityEstimate, family: TraceFamily) -> tuple[str, ...]:
+def _notices(estimate: DensityEstimate) -> tuple[str, ...]:
     notices = []
     if estimate.kind == "field":
         text = f"density {estimate.offset:.5g} +- {estimate.error_per_m2:.2g} m^-2"
@@ -304,6 +302,4 @@ def _notices(estimate: DensityEstimate, family: TraceFamily) -> tuple[str, ...]:
             f"the routes to the density differ by {100 * estimate.spread:.1f} %: "
             + ", ".join(f"{route.name} {route.value:.5g}" for route in estimate.routes)
         )
-    if len(family.sweeps) < 2:
-        notices.append("one sweep only")
     return tuple(notices)

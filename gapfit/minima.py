@@ -172,28 +172,38 @@ def _read_filling(
         return []
     noises = noise_of(stretches)
     width = usable_width(stretches, noises)
-    return [
-        _minimum(sweeps[index], density, (filling, place), piece, noise, width, dips[index], settings)
-        for index, piece, noise in zip(present, stretches, noises, strict=True)
-    ]
+    found = []
+    for index, piece, noise in zip(present, stretches, noises, strict=True):
+        sigma = filling_error_at(density, sweeps[index], place)
+        dip = _own_dip(dips[index], place, sigma)
+        local = _Local(sweeps[index], place, sigma, piece, noise, width, dip)
+        found.append(_minimum(local, filling, _abscissa(sweeps[index], density, place), settings))
+    return found
 
 
-def _minimum(
-    sweep: Sweep, density: DensityEstimate, where: tuple[Fraction, float], piece: Stretch, noise: Noise,
-    width: float, dips: Sequence[Dip], settings: ReadingSettings,
-) -> Minimum:  # fmt: skip
+@dataclass(frozen=True, eq=False)
+class _Local:
+    """All that is needed to read one sweep at one filling factor."""
+
+    sweep: Sweep
+    place: float
+    sigma: float
+    piece: Stretch
+    noise: Noise
+    width: float
+    dip: Dip | None
+
+
+def _minimum(local: _Local, filling: Fraction, abscissa: float, settings: ReadingSettings) -> Minimum:
     """The three readings of one filling on one sweep."""
-    filling, place = where
-    sigma = filling_error_at(density, sweep, place)
-    exact = fitted_value(piece, noise, width)
-    mean = mean_value(piece, noise, settings.window)
-    dip = _own_dip(dips, place, sigma)
-    lowest, lowest_place = _lowest(piece, noise, width, dip, place)
-    temperature, temperature_error = temperature_at(piece, width)
+    sweep, dip = local.sweep, local.dip
+    exact = fitted_value(local.piece, local.noise, local.width)
+    mean = mean_value(local.piece, local.noise, settings.window)
+    lowest, lowest_place = _lowest(local)
+    temperature, temperature_error = temperature_at(local.piece, local.width)
     floor = settings.relative_reading_error
-    abscissa = _abscissa(sweep, density, place)
     nearest = int(np.argmin(np.abs(sweep.abscissa - abscissa)))
-    shift = displacement_error(exact, sigma)
+    shift = displacement_error(exact, local.sigma)
     return Minimum(
         filling=filling,
         group=sweep.group,
@@ -211,30 +221,31 @@ def _minimum(
         mean_error=float(np.sqrt(mean.error**2 + shift**2 + (floor * mean.value) ** 2)),
         half_width=float("nan") if dip is None or dip.at_edge else dip.half_width,
         depth=float("nan") if dip is None else dip.depth,
-        rho_xy_ohm=_hall_at(piece, width),
+        rho_xy_ohm=_hall_at(local.piece, local.width),
         at_edge=exact.one_sided,
         one_direction=bool(sweep.one_sided[nearest]) or sweep.field_sign != 0,
     )
 
 
-def _lowest(piece: Stretch, noise: Noise, width: float, dip: Dip | None, place: float) -> tuple[Value, float]:
+def _lowest(local: _Local) -> tuple[Value, float]:
     """Local minimum next to the exact filling, and its filling factor; NaN where there is none.
 
     Steps to the vertex of the local parabola until it stays, no further than the sides of the minimum.
     """
-    if dip is None:
+    if local.dip is None:
         return NOTHING, float("nan")
-    sides = (dip.low - place) / piece.unit, (dip.high - place) / piece.unit
+    unit, width = local.piece.unit, local.width
+    sides = (local.dip.low - local.place) / unit, (local.dip.high - local.place) / unit
     where, found = 0.0, NOTHING
     for _ in range(LARGEST_STEPS):
-        found = fitted_value(piece, noise, width, where)
-        step = found.slope / (found.curvature * piece.unit) if found.curvature > 0 else np.inf
+        found = fitted_value(local.piece, local.noise, width, where)
+        step = found.slope / (found.curvature * unit) if found.curvature > 0 else np.inf
         if abs(step) < 0.05 * width:
-            return found, place + where * piece.unit
+            break
         where -= float(np.clip(step, -width, width)) if np.isfinite(step) else np.sign(found.slope) * width
         if not sides[0] <= where <= sides[1]:
             return NOTHING, float("nan")
-    return found, place + where * piece.unit
+    return found, local.place + where * unit
 
 
 def _own_dip(dips: Sequence[Dip], place: float, sigma: float) -> Dip | None:

@@ -1,4 +1,4 @@
-"""A small invented world for the tests of sweeps: dips and plateaus of known place, and tables made of them."""
+"""An invented world for the tests of sweeps: dips and plateaus of known place, and tables made of them."""
 
 from __future__ import annotations
 
