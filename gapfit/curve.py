@@ -23,7 +23,7 @@ __all__ = ["Curve", "Reference", "evaluate", "log_prefactor"]
 
 FloatArray = NDArray[np.float64]
 
-_G, _A, _B, _K, _H, _HT, _HX, _N, _NR, _L, _O, _E, _F, _P, _S, _I = range(len(PARAMETERS))
+_G, _A, _B, _K, _Q, _BS, _H, _HT, _HX, _N, _NR, _L, _O, _E, _F, _P, _S, _I = range(len(PARAMETERS))
 
 
 @dataclass(frozen=True)
@@ -120,7 +120,7 @@ def evaluate(
         x[tied, _B, 0] = log_prefactor(coordinates[tied], reference)
     hot, q = _electrons(x[:, _E], temperature, reference)
     columns: dict[int, FloatArray] | None = {} if jacobian else None
-    active, d_active = _activated(x, hot, reference, columns)
+    active, d_active, d_bath = _activated(x, hot, temperature / reference.high_K, reference, columns)
     hop, d_hop = _variable_range(x, hot, reference, columns)
     near, d_near = _nearest(x, hot, reference, columns)
     level, d_level = _level(x, hot, reference, columns)
@@ -129,7 +129,7 @@ def evaluate(
     by_electrons = d_active + d_hop + d_near + d_level
     total = active + hop + near + constant
     parts = {"activation": active, "hopping": hop, "nearest": near, "constant": constant + 0 * total}
-    slope = by_electrons * (1 - q)
+    slope = by_electrons * (1 - q) + d_bath
     if columns is None:
         return Curve(total, slope, parts)
     columns |= {_L: leak, _O: np.ones_like(leak), _E: by_electrons * q}
@@ -157,9 +157,16 @@ def _electrons(
 
 
 def _activated(
-    x: FloatArray, hot: FloatArray, reference: Reference, columns: dict[int, FloatArray] | None
-) -> tuple[FloatArray, FloatArray]:
-    """Activated contribution with closure, and its derivative by ln T_e."""
+    x: FloatArray,
+    hot: FloatArray,
+    bath: FloatArray,
+    reference: Reference,
+    columns: dict[int, FloatArray] | None,
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Activated contribution with closure, and its derivatives by ln T_e and by ln T at fixed T_e.
+
+    The bath temperature comes in units of the high reference.
+    """
     half = _exp(x[:, _G]) / 2
     inverse = 1 / hot
     by_gap = -half * (inverse - 1 / reference.high_K)
@@ -169,21 +176,40 @@ def _activated(
         by_spread = variance * (inverse**2 - 1 / reference.high_K**2)
         by_gap, by_electrons = by_gap + by_spread, by_electrons - variance * inverse**2
     log_active = np.minimum(x[:, _A] + by_gap - by_spread / 2, LARGEST_EXPONENT)
-    background, k = x[:, _B], _exp(x[:, _K])
-    if (background >= FAR).all():
-        value, share = np.exp(log_active), np.ones((1, 1))
+    if (x[:, _B] >= FAR).all():
+        value, share, by_bath = np.exp(log_active), np.ones((1, 1)), np.zeros((1, 1))
     else:
-        difference = k * (log_active - background)
-        share = 1 / (1 + _exp(difference))
-        log_value = background - np.logaddexp(0.0, -difference) / k
-        value = np.exp(log_value)
-        if columns is not None:
-            columns[_B] = value * (1 - share)
-            columns[_K] = value * (background - log_value + share * (log_active - background))
+        value, share = _closed(x, log_active, bath, columns)
+        by_bath = value * (1 - share) * x[:, _BS] * bath
     carried = value * share
     if columns is not None:
         columns |= {_G: carried * by_gap, _A: carried, _S: carried * by_spread}
-    return value, carried * by_electrons
+    return value, carried * by_electrons, by_bath
+
+
+def _closed(
+    x: FloatArray, log_active: FloatArray, bath: FloatArray, columns: dict[int, FloatArray] | None
+) -> tuple[FloatArray, FloatArray]:
+    """Activated contribution closed by the background, and its logarithmic derivative by the open one."""
+    background, k = x[:, _B] + x[:, _BS] * (bath - 1), _exp(x[:, _K])
+    q = 1 / (1 + _exp(-x[:, _Q]))
+    rise = np.minimum(k * (log_active - background), LARGEST_EXPONENT / 2)
+    ratio = np.exp(rise)
+    depth = -np.log1p(q * ratio) / q
+    small = rise < -30.0
+    filled = np.where(small, rise, np.log(np.where(small, 1.0, -np.expm1(depth))))
+    value = np.exp(background + filled / k)
+    with np.errstate(over="ignore"):
+        steep = np.where(small, 0.0, 1 / np.expm1(np.where(small, 1.0, -depth)))
+    local = ratio / (1 + q * ratio)
+    share = np.where(small, 1.0, steep * local)
+    if columns is not None:
+        columns[_B] = value * (1 - share)
+        columns[_BS] = columns[_B] * (bath - 1)
+        columns[_K] = value * (share * rise - filled) / k
+        by_shape = np.log1p(q * ratio) / q**2 - local / q
+        columns[_Q] = -value * steep * by_shape / k * q * (1 - q)
+    return value, share
 
 
 def _variable_range(

@@ -42,7 +42,7 @@ look_for = [{fillings}]
 max_denominator = 11
 
 [thermometry]
-relative_error = 0.005
+relative_error = 0.003
 scale_error = 0.01
 electron_saturation = true
 saturation_exponent = 4

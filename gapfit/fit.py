@@ -27,7 +27,7 @@ from gapfit.errors import InputError
 from gapfit.explore import Explored, explore
 from gapfit.hall import parse_filling
 from gapfit.intervals import Marginal
-from gapfit.mechanisms import COMBINATIONS, Combination, parse_combination
+from gapfit.mechanisms import Combination, combinations_for, parse_combination
 from gapfit.posterior import Problem, every_window, make_problem, one_window
 from gapfit.series import TemperatureSeries, make_series
 from gapfit.straight import StraightLine, straight_line
@@ -53,7 +53,8 @@ class FitSettings:
     Attributes
     ----------
     engine : {"mcmc", "fast"}
-    combinations : tuple of Combination
+    combinations : tuple of Combination or None
+        None takes the default ones for the series, see `gapfit.mechanisms.combinations_for`.
     window : tuple of (float, float) or None
         Pinned window in kelvin; None averages over windows.
     noise : {"student", "gaussian"}
@@ -68,7 +69,7 @@ class FitSettings:
     """
 
     engine: str = "mcmc"
-    combinations: tuple[Combination, ...] = COMBINATIONS
+    combinations: tuple[Combination, ...] | None = None
     window: tuple[float, float] | None = None
     noise: str = "student"
     hopping_power: float = 1.0
@@ -80,7 +81,7 @@ class FitSettings:
     @property
     def pinned(self) -> str:
         """What the user pinned: ``""``, ``"window"``, ``"mechanism"`` or ``"mechanism and window"``."""
-        parts = ["mechanism"] if len(self.combinations) == 1 else []
+        parts = ["mechanism"] if self.combinations is not None else []
         parts += ["window"] if self.window is not None else []
         return " and ".join(parts)
 
@@ -317,7 +318,7 @@ def fit_series(
         field_T=field_T,
         **record,
     )
-    combinations = COMBINATIONS if mechanisms is None else tuple(map(parse_combination, mechanisms))
+    combinations = None if mechanisms is None else tuple(map(parse_combination, mechanisms))
     settings = FitSettings(engine=engine, combinations=combinations, window=window, noise=noise, seed=seed)
     return fit_temperature_series(series, settings)
 
@@ -341,13 +342,16 @@ def fit_temperature_series(series: TemperatureSeries, settings: FitSettings) -> 
     """
     if settings.engine not in ("mcmc", "fast"):
         raise InputError(f"unknown engine {settings.engine!r}; allowed are 'mcmc' and 'fast'")
-    if not settings.combinations:
+    combinations = settings.combinations
+    if combinations is None:
+        combinations = combinations_for(np.isfinite(series.background))
+    if not combinations:
         raise InputError("no combination of mechanisms is given; name at least one, such as 'activation'")
     problem = _problem(series, settings)
     explore_seed, mcmc_seed, draw_seed = _seeds(series, settings)
-    log_prior = combination_log_prior(settings.combinations, settings.rules.nuisance_penalty)
-    explored = explore(problem, settings.combinations, log_prior, np.random.default_rng(explore_seed))
-    prior_of = dict(zip(settings.combinations, log_prior, strict=True))
+    log_prior = combination_log_prior(combinations, settings.rules.nuisance_penalty)
+    explored = explore(problem, combinations, log_prior, np.random.default_rng(explore_seed))
+    prior_of = dict(zip(combinations, log_prior, strict=True))
     fast = [fast_draws(problem, item, prior_of[item.combination]) for item in explored]
     posteriors, diagnostics = fast, fast_diagnostics(fast, explored)
     if settings.engine == "mcmc":

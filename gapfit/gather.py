@@ -12,10 +12,10 @@ from numpy.typing import NDArray
 
 from gapfit.errors import NotEnoughData
 from gapfit.hall import plateau_resistance
-from gapfit.series import ExcludedPoint, Quantity, ReadingKind, TemperatureSeries, make_series
+from gapfit.series import ExcludedPoint, Quantity, ReadingKind, TemperatureSeries, high_reference, make_series
 from gapfit.traces import Sweep, TraceFamily, conductivity, conductivity_error
 
-__all__ = ["Minimum", "ReadingSettings", "chosen_quantity", "gathered_series"]
+__all__ = ["Minimum", "ReadingSettings", "chosen_quantity", "flank_level", "gathered_series"]
 
 FloatArray = NDArray[np.float64]
 
@@ -174,6 +174,9 @@ def gathered_series(
         temperature_error = np.hypot(
             points.temperature_error, settings.temperature_relative_error * points.temperature
         )
+    background, background_slope = flank_level(usable)
+    if quantity == "sigma_xx" and sweep.quantity == "rho_xx" and np.isfinite(background):
+        background = float(conductivity(background, float(np.median(rho_xy))))
     directions = {one.direction for one in usable}
     return make_series(
         points.temperature,
@@ -186,6 +189,8 @@ def gathered_series(
         hall_resistance_ohm=float(np.median(rho_xy)),
         reading=settings.reading,
         error_source="trace",
+        background=background,
+        background_slope=background_slope,
         geometry_known=family.geometry.known,
         sample=settings.sample,
         cooldown=settings.cooldown,
@@ -195,6 +200,35 @@ def gathered_series(
         flags=_flags(usable, settings.reading),
         excluded=(*missed, *unread),
     )
+
+
+def flank_level(minima: Sequence[Minimum]) -> tuple[float, float]:
+    """Level of the flanks of a minimum at high temperature, and its relative slope with temperature.
+
+    Parameters
+    ----------
+    minima : sequence of Minimum
+        Readings of one filling at many temperatures.
+
+    Returns
+    -------
+    level : float, ohm or S
+        Lower shoulder at the temperature three quarters up the range of ln T; NaN if fewer than two of the
+        warmer sweeps show it.
+    slope : float
+        Relative change of it, over that temperature; NaN if fewer than three show it.
+    """
+    temperature = np.array([one.temperature_K for one in minima])
+    shoulder = np.array([one.minimum + one.depth for one in minima])
+    seen = np.isfinite(shoulder) & (shoulder > 0) & (temperature >= np.median(temperature))
+    if seen.sum() < 2:
+        return float("nan"), float("nan")
+    middle = high_reference(float(temperature.min()), float(temperature.max()))
+    level, x = np.log(shoulder[seen]), temperature[seen] / middle - 1
+    if seen.sum() < 3 or np.ptp(x) < 0.05:
+        return float(np.exp(np.median(level))), float("nan")
+    slope, intercept = np.polyfit(x, level, 1)
+    return float(np.exp(intercept)), float(slope)
 
 
 @dataclass(frozen=True, eq=False)

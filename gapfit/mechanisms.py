@@ -30,6 +30,7 @@ __all__ = [
     "nearest_neighbour",
     "parse_combination",
     "power_mean",
+    "roll_over",
 ]
 
 FloatArray = NDArray[np.float64]
@@ -103,6 +104,35 @@ def power_mean(activated: ArrayLike, background: ArrayLike, sharpness: ArrayLike
     """
     k = np.asarray(sharpness, float)
     return np.asarray(np.exp(-np.logaddexp(-k * np.log(activated), -k * np.log(background)) / k))
+
+
+def roll_over(
+    activated: ArrayLike, background: ArrayLike, sharpness: ArrayLike, saturation: ArrayLike
+) -> FloatArray:
+    """Closure at high temperature between a power mean and an exponential saturation.
+
+    With x = activated / background: background [1 - (1 + q x^k)^(-1/q)]^(1/k). Saturation q = 1 is the
+    power mean of sharpness k, q = 0 with k = 1 is 1 - exp(-x); tanh and arctan lie close to members in
+    between. No closure is exact for a real sample, hence both shapes are fitted.
+
+    Parameters
+    ----------
+    activated : array_like, ohm or S
+        Activated contribution, above zero.
+    background : array_like, ohm or S
+        Level that the flanks of the minimum approach, above zero.
+    sharpness : array_like
+        Exponent k > 0.
+    saturation : array_like
+        Shape q, above zero and at most one.
+
+    Returns
+    -------
+    ndarray, ohm or S
+    """
+    k, q = np.asarray(sharpness, float), np.asarray(saturation, float)
+    ratio = (np.asarray(activated, float) / np.asarray(background, float)) ** k
+    return np.asarray(background * (-np.expm1(-np.log1p(q * ratio) / q)) ** (1 / k))
 
 
 def efros_shklovskii(
@@ -221,8 +251,8 @@ class Parameter:
         Unit of the natural value; ``"reading"`` means ohm or S.
     meaning : str
         One line for reports.
-    scale : {"log", "linear", "quarter"}
-        How the coordinate x becomes the natural value: exp(x), x, or 1/(4 (1 + exp(-x))).
+    scale : {"log", "linear", "unit", "quarter"}
+        How the coordinate x becomes the natural value: exp(x), x, 1/(1 + exp(-x)), or a quarter of that.
     off : float
         Coordinate at which the contribution vanishes.
     """
@@ -238,8 +268,9 @@ class Parameter:
         """Natural value of a coordinate."""
         if self.scale == "log":
             return np.exp(np.clip(coordinate, -LARGEST_EXPONENT, LARGEST_EXPONENT))
-        if self.scale == "quarter":
-            return 0.25 / (1 + np.exp(-np.clip(coordinate, -LARGEST_EXPONENT, LARGEST_EXPONENT)))
+        if self.scale in ("unit", "quarter"):
+            logistic = 1 / (1 + np.exp(-np.clip(coordinate, -LARGEST_EXPONENT, LARGEST_EXPONENT)))
+            return logistic if self.scale == "unit" else logistic / 4
         return coordinate
 
 
@@ -250,8 +281,12 @@ PARAMETERS: tuple[Parameter, ...] = (
     ),
     Parameter("background", r"$y_{bg}$", "reading", "level that the minimum fills up to", "log", FAR),
     Parameter("sharpness", r"$k$", "", "sharpness of the roll-over", "log", 0.0),
-    Parameter("hopping", r"$y_h(T_l)$", "reading", "hopping contribution at the low reference", "log", -FAR),
-    Parameter("hopping_T0_K", r"$T_{hop}$", "K", "hopping temperature", "log", 0.0),
+    Parameter("saturation", r"$q$", "", "shape of the roll-over, 1 power mean to 0 exponential", "unit",
+    FAR), Parameter(
+        "background_slope", r"$s_{bg}$", "", "relative rise of the background by T over T_h", "linear", 0.0
+    ),
+    Parameter("hopping", r"$y_h(T_l)$", "reading", "hopping contribution at the low reference", "log",
+    -FAR), Parameter("hopping_T0_K", r"$T_{hop}$", "K", "hopping temperature", "log", 0.0),
     Parameter("hopping_exponent", r"$\alpha$", "", "1/2 Efros-Shklovskii, 1/3 Mott (fixed)", "linear", 0.5),
     Parameter(
         "nearest", r"$y_3(T_l)$", "reading", "nearest-neighbour hopping at the low reference", "log", -FAR
@@ -273,7 +308,8 @@ OFF: FloatArray = np.array([parameter.off for parameter in PARAMETERS])
 
 MECHANISMS: dict[str, tuple[str, ...]] = {
     "activation": ("gap_K", "activated"),
-    "roll-over": ("background", "sharpness"),
+    "roll-over": ("background", "sharpness", "saturation", "background_slope"),
+    "power mean": ("background", "sharpness"),
     "fermi": (),
     "spread": ("spread",),
     "es": ("hopping", "hopping_T0_K"),
@@ -290,6 +326,7 @@ MECHANISMS: dict[str, tuple[str, ...]] = {
 _WORDS = {
     "activation": "activation",
     "roll-over": "roll-over",
+    "power mean": "power-mean roll-over",
     "fermi": "Fermi form",
     "spread": "spread of gaps",
     "es": "ES hopping",
@@ -301,7 +338,7 @@ _WORDS = {
     "constant": "constant",
     "power law": "power law",
 }
-_NEEDS_ACTIVATION = {"roll-over", "fermi", "spread", "nearest"}
+_NEEDS_ACTIVATION = {"roll-over", "power mean", "fermi", "spread", "nearest"}
 _CARRIERS = {"activation", "es", "mott", "constant", "power law"}
 _EXCLUSIVE = (
     {"roll-over", "fermi"},
@@ -401,6 +438,28 @@ def parse_combination(text: str) -> Combination:
     return Combination(tuple(part.strip() for part in text.lower().split("+")))
 
 
+def combinations_for(background_known: bool) -> tuple[Combination, ...]:
+    """Combinations that are averaged by default.
+
+    Parameters
+    ----------
+    background_known : bool
+        Whether the sweeps show the flanks of the minimum. The minimum must then fill in towards a known
+        level, so activation without a roll-over is no candidate.
+
+    Returns
+    -------
+    tuple of Combination
+    """
+    if not background_known:
+        return COMBINATIONS
+    return tuple(
+        combination
+        for combination in COMBINATIONS
+        if not combination.activated or "roll-over" in combination.mechanisms
+    )
+
+
 def _default_combinations() -> tuple[Combination, ...]:
     activated = [
         ("activation", *closure, *tail, *extra, *heat)
@@ -420,4 +479,4 @@ def _default_combinations() -> tuple[Combination, ...]:
 
 
 COMBINATIONS: tuple[Combination, ...] = _default_combinations()
-"""The combinations that are averaged by default."""
+"""The combinations that are averaged by default where the flanks are not known."""

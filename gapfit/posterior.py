@@ -382,8 +382,7 @@ def pooled_objective(
         base[row] = combination.base
     centre, width = problem.prior.centre, problem.prior.width
 
-    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray,
-    FloatArray]:
+    def objective(whitened: FloatArray, rows: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, FloatArray]:
         scale = np.where(fitted[rows], width, 0.0)
         coordinates = np.where(fitted[rows], centre + width * whitened, base[rows])
         value, gradient, curvature = problem.log_likelihood_with_slopes(coordinates)

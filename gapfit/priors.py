@@ -70,7 +70,12 @@ class Prior:
                 continue
             ends = self.centre[slot] + 1.96 * self.width[slot] * np.array([-1.0, 0.0, 1.0])
             low, middle, high = (float(number) for number in parameter.natural(ends))
-            kind = {"log": "log-normal", "linear": "normal", "quarter": "logit-normal on (0, 1/4)"}
+            kind = {
+                "log": "log-normal",
+                "linear": "normal",
+                "unit": "logit-normal on (0, 1)",
+                "quarter": "logit-normal on (0, 1/4)",
+            }
             rows.append(
                 {
                     "name": parameter.name,
@@ -103,8 +108,8 @@ def reference_of(
     -------
     Reference
     """
-    low, high = float(series.temperature[0]), float(series.temperature[-1])
-    return Reference(low ** (1 / 4) * high ** (3 / 4), low, hopping_power, saturation_exponent)
+    low = float(series.temperature[0])
+    return Reference(series.high_reference, low, hopping_power, saturation_exponent)
 
 
 def prior_at_data_scale(series: TemperatureSeries, reference: Reference) -> Prior:
@@ -136,8 +141,12 @@ def prior_at_data_scale(series: TemperatureSeries, reference: Reference) -> Prio
     rows = {
         "gap_K": (np.log(4 * middle), 1.5),
         "activated": (at_high, 2.0),
-        "background": (np.log(top) + 0.7, 1.5),
-        "sharpness": (0.35, 0.45),
+        "background": _background(series, top),
+        "sharpness": (0.28, 0.35),
+        "saturation": (0.0, 2.5),
+        "background_slope": (0.0, 0.05)
+        if np.isnan(series.background_slope)
+        else (series.background_slope, 0.01),
         "hopping": (np.log(bottom), 2.0),
         "hopping_T0_K": (np.log(60 * middle), 1.7),
         "hopping_exponent": (0.5, 0.0),
@@ -155,6 +164,13 @@ def prior_at_data_scale(series: TemperatureSeries, reference: Reference) -> Prio
     for name, (mean, deviation) in rows.items():
         centre[SLOT[name]], width[SLOT[name]] = mean, deviation
     return Prior(centre, width)
+
+
+def _background(series: TemperatureSeries, top: float) -> tuple[float, float]:
+    """Flank level where the sweeps show it, else twice the warmest readings within a factor of 4.5."""
+    if np.isfinite(series.background) and series.background > 0:
+        return float(np.log(series.background)), series.background_log_error
+    return float(np.log(top)) + 0.7, 1.5
 
 
 def _positive(series: TemperatureSeries) -> FloatArray:

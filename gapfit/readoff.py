@@ -18,6 +18,7 @@ from gapfit.series import (
     HIGHEST_FRACTION_START_K,
     HIGHEST_TEMPERATURE_K,
     ExcludedPoint,
+    Quantity,
     ReadingKind,
     TemperatureSeries,
     assumed_error,
@@ -43,6 +44,10 @@ _SORTS = {
     f"{_RHO}_error": ("resistance", "ohm"),
     _SIGMA: ("conductance", "S"),
     f"{_SIGMA}_error": ("conductance", "S"),
+    f"{_RHO}_background": ("resistance", "ohm"),
+    f"{_RHO}_background_rise": ("resistance", "ohm"),
+    f"{_SIGMA}_background": ("conductance", "S"),
+    f"{_SIGMA}_background_rise": ("conductance", "S"),
     "rho_xy_ohm": ("resistance", "ohm"),
     "drive_current_A": ("current", "A"),
     "total_field_T": ("field", "T"),
@@ -83,7 +88,8 @@ def series_from_table(table: Table, settings: SeriesSettings | None = None) -> t
     ----------
     table : Table
         Columns filling, temperature_K and rho_xx_ohm or sigma_xx_S; optional: field_T, *_error,
-        temperature_error_K, rho_xy_ohm, sample, cooldown, contacts, direction, drive_current_A,
+        temperature_error_K, *_background (flank level) and *_background_rise (its change over the reference
+        temperature), rho_xy_ohm, sample, cooldown, contacts, direction, drive_current_A,
         total_field_T, excluded (yes or no), reason.
     settings : SeriesSettings, optional
         Quantity, errors and names.
@@ -213,7 +219,8 @@ def _numbers(table: Table, name: str, excluded: NDArray[np.bool_]) -> FloatArray
         return take(table, ColumnRule(name), dimension, unit)
     gaps = np.isnan(table.values[name])
     other = {_RHO: _SIGMA, _SIGMA: _RHO}.get(name.removesuffix("_error"), "")
-    optional = name in ("field_T", "total_field_T", "drive_current_A", "rho_xy_ohm") or other in table.columns
+    optional = name in ("field_T", "total_field_T", "drive_current_A", "rho_xy_ohm") or "_background" in name
+    optional = optional or other in table.columns
     if not gaps.any() or not (optional or bool(np.all(excluded[gaps]))):
         return take(table, ColumnRule(name), dimension, unit)
     filled = dict(table.values) | {name: np.where(gaps, 0.0, table.values[name])}
@@ -285,6 +292,7 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
         quantity=quantity,
         hall_resistance_ohm=float(np.median(hall)) if hall.size else abs(plateau_resistance(filling)),
         error_source="assumed" if assumed else "stated",
+        **_background(rows, first, column, quantity, hall),
         geometry_known=settings.geometry_known,
         sample=rows.text("sample", first) or settings.sample,
         cooldown=rows.text("cooldown", first) or settings.cooldown,
@@ -296,6 +304,17 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
         excluded=_excluded(rows, mine, column),
         **_tilt(rows, first),
     )
+
+
+def _background(
+    rows: _Rows, first: int, column: str, quantity: Quantity, hall: FloatArray
+) -> dict[str, float]:
+    """Flank level of the minimum and its relative slope, as the fit wants them."""
+    level = rows.number(f"{column}_background", first)
+    slope = rows.number(f"{column}_background_rise", first) / level
+    if quantity == "sigma_xx" and column == _RHO and np.isfinite(level):
+        level = float(conductivity(level, float(np.median(hall))))
+    return {"background": level, "background_slope": slope}
 
 
 def _has_readings(rows: _Rows, name: str, used: NDArray[np.intp]) -> bool:
@@ -374,7 +393,9 @@ def series_to_columns(series: Sequence[TemperatureSeries]) -> dict[str, list[Any
 
 _COLUMNS = (
     "filling", "field_T", "temperature_K", "temperature_error_K",
-    _RHO, f"{_RHO}_error", _SIGMA, f"{_SIGMA}_error", "rho_xy_ohm",
+    _RHO, f"{_RHO}_error", _SIGMA, f"{_SIGMA}_error",
+    f"{_RHO}_background", f"{_RHO}_background_rise",
+    f"{_SIGMA}_background", f"{_SIGMA}_background_rise", "rho_xy_ohm",
     "sample", "cooldown", "contacts", "direction", "drive_current_A", "total_field_T",
     "reading", "flags", "excluded", "reason",
 )  # fmt: skip
@@ -387,6 +408,8 @@ def _series_rows(one: TemperatureSeries) -> list[dict[str, Any]]:
         "filling": str(one.filling),
         "field_T": _blank(one.field_T),
         "rho_xy_ohm": _blank(one.hall_resistance_ohm),
+        f"{column}_background": _blank(one.background),
+        f"{column}_background_rise": _blank(one.background * one.background_slope),
         "sample": one.sample,
         "cooldown": one.cooldown,
         "contacts": one.contacts,

@@ -12,12 +12,22 @@ from numpy.typing import ArrayLike, NDArray
 from gapfit.errors import InputError, NotEnoughData
 from gapfit.hall import plateau_resistance
 
-__all__ = ["ExcludedPoint", "Quantity", "ReadingKind", "TemperatureSeries", "make_series"]
+__all__ = [
+    "ExcludedPoint",
+    "Quantity",
+    "ReadingKind",
+    "TemperatureSeries",
+    "high_reference",
+    "make_series",
+]
 
 FloatArray = NDArray[np.float64]
 Quantity = Literal["rho_xx", "sigma_xx"]
 ReadingKind = Literal["exact", "minimum", "mean"]
 MINIMUM_POINTS = 3
+BACKGROUND_LOG_ERROR = 0.25
+"""The lower shoulder is known to per cent, but what closes the activation is only near it (own choice)."""
+
 HIGHEST_TEMPERATURE_K = 350.0
 HIGHEST_FRACTION_START_K = 15.0
 
@@ -67,6 +77,13 @@ class TemperatureSeries:
         Where on the trace the readings were taken.
     error_source : {"stated", "trace", "assumed"}
         Where the standard errors come from.
+    background : float, ohm or S
+        Level of the flanks of the minimum at high temperature, towards which it fills in; NaN if unknown.
+    background_slope : float
+        Relative change of that level with temperature, over the temperature three quarters up the range
+        of ln T (where the activated contribution is quoted); NaN if unknown.
+    background_log_error : float
+        Standard error of its logarithm as the level that closes the activation.
     geometry_known : bool
         Whether readings are truly per square, so that the prefactor has its meaning.
     sample, cooldown, contacts, direction : str
@@ -91,6 +108,9 @@ class TemperatureSeries:
     hall_resistance_ohm: float = float("nan")
     reading: ReadingKind = "exact"
     error_source: Literal["stated", "trace", "assumed"] = "stated"
+    background: float = float("nan")
+    background_slope: float = float("nan")
+    background_log_error: float = BACKGROUND_LOG_ERROR
     geometry_known: bool = True
     sample: str = ""
     cooldown: str = ""
@@ -105,6 +125,11 @@ class TemperatureSeries:
     def unit(self) -> str:
         """Unit of the readings, ``"ohm"`` or ``"S"``."""
         return "ohm" if self.quantity == "rho_xx" else "S"
+
+    @property
+    def high_reference(self) -> float:
+        """Temperature three quarters up the range of ln T, K, where the activated part is quoted."""
+        return high_reference(float(self.temperature[0]), float(self.temperature[-1]))
 
     @property
     def n_point(self) -> int:
@@ -139,6 +164,11 @@ class TemperatureSeries:
         )
 
 
+def high_reference(low_K: float, high_K: float) -> float:
+    """Temperature three quarters up a range of ln T, K."""
+    return float(low_K ** (1 / 4) * high_K ** (3 / 4))
+
+
 def make_series(
     temperature: ArrayLike,
     value: ArrayLike,
@@ -157,8 +187,8 @@ def make_series(
     value : array_like[n_point], ohm or S
         Readings; zero and negative ones are data.
     error : array_like[n_point] or float, ohm or S, optional
-        Standard errors. Without them 2 % of the reading plus 0.2 % of the largest reading is assumed and the
-        fitted inflation takes over; the series is flagged ``errors_assumed``.
+        Standard errors. Without them 2 % of the reading plus 0.2 % of the largest reading is assumed and
+        the fitted inflation takes over; the series is flagged ``errors_assumed``.
     filling : Fraction
         Exact filling factor.
     temperature_error : array_like[n_point] or float, K, optional
