@@ -6,7 +6,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from matplotlib.ticker import FixedLocator, MaxNLocator
 from numpy.typing import NDArray
 
 from gapfit.fit import GapFit
@@ -35,6 +34,8 @@ from gapfit.style import (
     RIGHT_MM,
     Axes,
     Figure,
+    FixedLocator,
+    MaxNLocator,
     label_axes,
     legend_below,
     new_figure,
@@ -85,11 +86,11 @@ def inverse_temperature_spans(series: TemperatureSeries, width_mm: float) -> lis
     list of Span
     """
     temperatures = np.append(series.temperature, [point.temperature for point in series.excluded])
-    inverse = np.sort(1 / temperatures)
+    inverse = np.sort(1 / np.unique(temperatures))
     room = width_mm - LEFT_MM - RIGHT_MM
     low, high = float(inverse[0]), float(inverse[-1])
     pad = 0.04 * (high - low)
-    huddled = np.median(inverse) - low < 0.25 * (high - low)
+    huddled = np.median(1 / series.temperature) - low < 0.25 * (high - low)
     if inverse.size < BREAK_FEWEST or not huddled:
         return [Span(max(low - pad, 0.0), high + pad, LEFT_MM, room)]
     index = int(np.ceil(0.68 * inverse.size))
@@ -171,9 +172,9 @@ def _arrange(figure: Figure, upper: list[Axes], lower: list[Axes], spans: list[S
         below.xaxis.set_major_locator(MaxNLocator(max(3, int(span.width_mm / 10)), steps=[1, 2, 2.5, 5, 10]))
     width, height = size_mm(figure)
     middle = (LEFT_MM + width - RIGHT_MM) / 2 / width
-    look = {"ha": "center", "va": "bottom", "fontsize": 8.0}
-    figure.text(middle, (foot + 1.0) / height, r"inverse temperature $1/T$ (K$^{-1}$)", **look)
-    figure.text(middle, (top + 3.9) / height, r"temperature $T$ (K)", **look)
+    look: dict[str, Any] = {"ha": "center", "va": "bottom", "fontsize": 8.0}
+    figure.text(middle, (foot + 1.0) / height, "inverse temperature 1/T (K⁻¹)", **look)
+    figure.text(middle, (top + 3.9) / height, "temperature (K)", **look)
     if len(spans) > 1:
         _join(upper, 1.0)
         _join(lower, 0.0)

@@ -6,9 +6,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from matplotlib.cm import ScalarMappable
-from matplotlib.colors import LogNorm, Normalize
-from matplotlib.ticker import FixedFormatter, FixedLocator, MaxNLocator
 from numpy.typing import NDArray
 
 from gapfit.curve import log_prefactor
@@ -16,7 +13,7 @@ from gapfit.fit import GapFit
 from gapfit.mechanisms import PARAMETERS, SLOT
 from gapfit.panels import best_words, head
 from gapfit.rounding import round_value
-from gapfit.scales import logarithmic_ticks, plain_number, reading_unit, symbol_of
+from gapfit.scales import logarithmic_ticks, plain_number, reading_unit, set_ticks, symbol_of
 from gapfit.style import (
     BLACK,
     BLUE,
@@ -25,6 +22,10 @@ from gapfit.style import (
     TWO_COLUMNS_MM,
     Axes,
     Figure,
+    FixedLocator,
+    LogNorm,
+    MaxNLocator,
+    Normalize,
     label_axes,
     new_figure,
     place,
@@ -242,95 +243,93 @@ def window_map_figure(fit: GapFit, width_mm: float = TWO_COLUMNS_MM) -> Figure:
         windows that are too short to be fitted are hatched; a ring marks the window of largest weight. The
         colours of the gap span its 95 % interval, so that even colours mean that the window does not matter.
     """
-    edges, gap, weight = _window_table(fit)
+    lower, upper, gap, weight = _window_table(fit)
     beside = width_mm > 120
     left, foot, bar, height = 14.0, 11.0, 14.0, 48.0
     room = (width_mm / (2 if beside else 1)) - left - bar - 3.0
     figure = new_figure(width_mm, (1 if beside else 2) * (height + foot) + 16.0)
-    names = (r"median gap $\Delta$ (K)", "weight of the window (log. scale)")
+    names = ("median gap (K)", "weight of the window (log. scale)")
     panels = (("gap", gap), ("weight", weight))
     for index, ((name, values), words) in enumerate(zip(panels, names, strict=True)):
         corner = (index * width_mm / 2 if beside else 0.0, 0.0 if beside else (1 - index) * (height + foot))
         axes = place(figure.add_subplot(), corner[0] + left, corner[1] + foot, room, height)
-        _plane(axes, _colour_scale(fit, name, values), values, np.isfinite(weight))
+        _plane(axes, name, _colour_scale(fit, name, values), values, np.isfinite(weight))
         best = np.unravel_index(np.nanargmax(weight), weight.shape)
         axes.plot(
             best[1], best[0], "o", markersize=5, markerfacecolor="none", color="#d62300", markeredgewidth=1.1
         )
-        _window_axes(axes, edges, room, height)
+        _window_axes(axes, lower, upper, (room, height))
         if len(axes.images) > 1:
             _colour_bar(figure, axes, words, (corner[0] + left + room + 1.8, corner[1] + foot, 3.0, height))
     head(figure, fit)
     return figure
 
 
-def _window_table(fit: GapFit) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Temperatures of the readings, and median gap and weight by [upper, lower] end."""
-    windows, n = fit.problem.windows, fit.series.n_point
-    gap, weight = np.full((n, n), np.nan), np.full((n, n), np.nan)
-    weight[windows.high - 1, windows.low] = 0.0
+def _window_table(fit: GapFit) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Lower and upper ends of the windows, and median gap and weight by [upper, lower] end; NaN without."""
+    windows, temperature = fit.problem.windows, fit.series.temperature
+    lows, column = np.unique(windows.low, return_inverse=True)
+    highs, row = np.unique(windows.high, return_inverse=True)
+    gap = np.full((highs.size, lows.size), np.nan)
+    weight = gap.copy()
+    weight[row, column] = np.bincount(fit.draws.window, minlength=windows.n_window) / fit.draws.window.size
     activated, values = fit.draws.activated, fit.draws.natural("gap_K") * fit.scale
     for window in np.unique(fit.draws.window):
-        here = fit.draws.window == window
-        cell = windows.high[window] - 1, windows.low[window]
-        weight[cell] = here.mean()
-        if (here & activated).sum() >= FEWEST_DRAWS:
-            gap[cell] = np.median(values[here & activated])
-    return fit.series.temperature, gap, weight
+        here = activated & (fit.draws.window == window)
+        if here.sum() >= FEWEST_DRAWS:
+            gap[row[window], column[window]] = np.median(values[here])
+    return temperature[lows], temperature[highs - 1], gap, weight
 
 
-def _colour_scale(fit: GapFit, name: str, values: FloatArray) -> ScalarMappable | None:
-    """Colours of a quantity, None where no window has a value."""
+def _colour_scale(fit: GapFit, name: str, values: FloatArray) -> Normalize | None:
+    """Range of colours of a quantity, None where no window has a value."""
     known = values[values > 0]
     if not known.size:
         return None
     low, high = float(known.min()), float(known.max())
     if name == "weight":
-        return ScalarMappable(LogNorm(min(low, 0.5 * high), high), plane_map(name))
+        return LogNorm(min(low, 0.5 * high), high)
     interval = fit.gap.interval(0.95)
     if np.isfinite(interval.low):
         low, high = min(low, interval.low), max(high, interval.high)
-    return ScalarMappable(Normalize(low, max(high, low * 1.001)), plane_map(name))
+    return Normalize(low, max(high, low * 1.001))
 
 
 def _plane(
-    axes: Axes, colours: ScalarMappable | None, values: FloatArray, possible: NDArray[np.bool_]
+    axes: Axes, name: str, norm: Normalize | None, values: FloatArray, possible: NDArray[np.bool_]
 ) -> None:
     """Colours over a plane; pale where there is no value, hatched where there is no window."""
     axes.patch.set(facecolor="white", hatch="////", edgecolor="#bdbdbd", linewidth=0)
     pale = np.where(possible[:, :, None], np.array([0.94, 0.94, 0.94, 1.0]), 0.0)
     look: dict[str, Any] = {"origin": "lower", "aspect": "auto", "interpolation": "nearest"}
     axes.imshow(pale, **look)
-    if colours is None:
-        at = {"transform": axes.transAxes, "ha": "center", "va": "center"}
+    if norm is None:
+        at: dict[str, Any] = {"transform": axes.transAxes, "ha": "center", "va": "center"}
         axes.text(0.5, 0.5, "no window has\nactivated draws", **at, backgroundcolor="white")
     else:
         shown = np.where(values > 0, values, np.nan)
-        axes.imshow(shown, cmap=colours.cmap, norm=colours.norm, **look)
+        axes.imshow(shown, cmap=plane_map(name), norm=norm, **look)
 
 
-def _window_axes(axes: Axes, temperature: FloatArray, width: float, height: float) -> None:
-    """Ticks at readings, as many as there is room for."""
-    n = temperature.size
-    for axis, room, size in ((axes.xaxis, width, 7.5), (axes.yaxis, height, 3.6)):
-        every = max(1, int(np.ceil(n * size / room)))
-        places = list(range(0, n, every))
-        axis.set_major_locator(FixedLocator(places))
-        axis.set_major_formatter(
-            FixedFormatter([plain_number(float(f"{temperature[k]:.3g}")) for k in places])
-        )
-    label_axes(axes, "lower end of the window $T$ (K)", "upper end of the window $T$ (K)", y_mm=10.5)
+def _window_axes(axes: Axes, lower: FloatArray, upper: FloatArray, size: tuple[float, float]) -> None:
+    """Ticks at ends of windows, as many as there is room for."""
+    for which, ends, room, least in (("x", lower, size[0], 7.5), ("y", upper, size[1], 3.6)):
+        every = max(1, int(np.ceil(ends.size * least / room)))
+        places = range(0, ends.size, every)
+        set_ticks(axes, which, list(places), [plain_number(float(f"{ends[k]:.3g}")) for k in places])
+    label_axes(axes, "lower end of the window (K)", "upper end of the window (K)", y_mm=10.5)
 
 
 def _colour_bar(figure: Figure, axes: Axes, words: str, box: tuple[float, float, float, float]) -> None:
     bar_axes: Any = place(figure.add_subplot(), *box)
-    bar = figure.colorbar(axes.images[-1], cax=bar_axes)
-    low, high = bar.vmin, bar.vmax
-    if isinstance(bar.norm, LogNorm):
+    image = axes.images[-1]
+    bar = figure.colorbar(image, cax=bar_axes)
+    low, high = (float(end or 0.0) for end in image.get_clim())
+    if isinstance(image.norm, LogNorm):
         ticks = logarithmic_ticks(low, high)[0]
     else:
         ticks = [tick for tick in MaxNLocator(5).tick_values(low, high) if low <= tick <= high]
     bar.set_ticks(ticks, labels=[plain_number(tick) for tick in ticks])
     bar.minorticks_off()
-    bar.outline.set_linewidth(0.6)  # type: ignore[operator]
+    bar_axes.spines[:].set_linewidth(0.6)
     bar.set_label(words)

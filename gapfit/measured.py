@@ -7,9 +7,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from matplotlib.cm import ScalarMappable
-from matplotlib.colors import LogNorm
-from matplotlib.ticker import FixedLocator, MaxNLocator
 from numpy.typing import NDArray
 
 from gapfit.calibration import DensityEstimate
@@ -38,6 +35,10 @@ from gapfit.style import (
     TWO_COLUMNS_MM,
     Axes,
     Figure,
+    FixedLocator,
+    LogNorm,
+    MaxNLocator,
+    ScalarMappable,
     label_axes,
     legend_below,
     new_figure,
@@ -171,7 +172,7 @@ def _draw_panel(
     kind = panel.sweeps[0].kind
     label_axes(
         axes,
-        "magnetic field $B$ (T)" if kind == "field" else r"filling factor $\nu$",
+        "magnetic field (T)" if kind == "field" else "filling factor",
         rf"${symbol}$ ({unit.name})",
     )
 
@@ -245,8 +246,8 @@ def _temperature_bar(figure: Figure, family: TraceFamily, box: tuple[float, floa
             ticks.append(value)
     bar.set_ticks(ticks, labels=[plain_number(tick) for tick in ticks])
     bar.minorticks_off()
-    bar.outline.set_linewidth(0.6)  # type: ignore[operator]
-    bar.set_label("temperature $T$ (K)")
+    bar_axes.spines[:].set_linewidth(0.6)
+    bar.set_label("temperature (K)")
 
 
 # ---------------------------------------------------------------------------------------------------- widths
@@ -310,7 +311,7 @@ def _arrange_widths(figure: Figure, panels: Sequence[Axes], seen: Sequence[Minim
         axes.set_yscale("log")
         axes.set_ylim(low, high)
         set_ticks(axes, "y", major, [plain_number(tick) for tick in major], minor)
-        label_axes(axes, r"temperature $T$ (K)", r"full width $\delta\nu$ of minimum")
+        label_axes(axes, "temperature (K)", "full width δν of minimum")
 
 
 # --------------------------------------------------------------------------------------------------- density
@@ -334,7 +335,7 @@ def density_figure(density: DensityEstimate, width_mm: float = ONE_COLUMN_MM) ->
     used = density.offset if field else density.slope
     error = float(np.sqrt(density.covariance[0 if field else 2]))
     size = 1e15
-    rows = [(f"{route.name}, $n$ = {route.n_used}", route.value, route.error) for route in density.routes]
+    rows = [(f"{route.name}, n = {route.n_used}", route.value, route.error) for route in density.routes]
     rows = [*rows, ("used", used, error)]
     left, tall = 30.0, 5.0 * len(rows) + 2.0
     figure = new_figure(width_mm, tall + 12.5)
@@ -352,7 +353,7 @@ def density_figure(density: DensityEstimate, width_mm: float = ONE_COLUMN_MM) ->
     axes.set_yticklabels([name for name, _, _ in reversed(rows)])
     axes.tick_params(axis="y", length=0)
     axes.xaxis.set_major_locator(MaxNLocator(4))
-    unit = {"field": "m$^{-2}$", "gate": "m$^{-2}$/V"}.get(density.kind, "per unit")
+    unit = {"field": "m⁻²", "gate": "m⁻²/V"}.get(density.kind, "per unit")
     name = (
         "density"
         if field
@@ -361,5 +362,5 @@ def density_figure(density: DensityEstimate, width_mm: float = ONE_COLUMN_MM) ->
         else "scale of the density"
     )
     axes.ticklabel_format(axis="x", useOffset=False)
-    label_axes(axes, rf"{name} ($10^{{15}}$ {unit})", None, 4.5)
+    label_axes(axes, f"{name} (10¹⁵ {unit})", None, 4.5)
     return figure

@@ -7,8 +7,6 @@ from textwrap import fill
 from typing import Any
 
 import numpy as np
-from matplotlib.container import ErrorbarContainer
-from matplotlib.patches import Patch
 from numpy.typing import NDArray
 
 from gapfit.fit import GapFit
@@ -17,7 +15,21 @@ from gapfit.mechanisms import Combination
 from gapfit.rounding import round_limit, round_value
 from gapfit.scales import MINUS, ReadingScale, first_of, plain_number
 from gapfit.series import TemperatureSeries
-from gapfit.style import BAND_68, BAND_95, BLACK, BLUE, GREY, PART_LOOK, RIGHT_MM, Axes, Figure, size_mm
+from gapfit.style import (
+    BAND_68,
+    BAND_95,
+    BLACK,
+    BLUE,
+    GREY,
+    LINEAR_GREY,
+    PART_LOOK,
+    RIGHT_MM,
+    Axes,
+    ErrorbarContainer,
+    Figure,
+    Patch,
+    size_mm,
+)
 
 __all__ = [
     "CONVENTION",
@@ -43,8 +55,8 @@ BoolArray = NDArray[np.bool_]
 CONVENTION = r"gap $\Delta$ in $\exp(-\Delta/2k_{\mathrm{B}}T)$"
 """Printed wherever a gap is shown."""
 
-EXCLUDED_MARKERS = ("x", "+", "1", "2")
-LEGEND_LETTERS = 34
+EXCLUDED_MARKERS = ("D", "s", "p", "h")
+LEGEND_LETTERS = 28
 MEDIAN, BAND_NAMES, LINE = "posterior median", ("68 % posterior band", "95 % posterior band"), "straight line"
 QUANTILES = (0.025, 0.16, 0.5, 0.84, 0.975)
 
@@ -151,7 +163,7 @@ class Readings:
             "linestyle": "none",
             "elinewidth": 0.7,
             "capsize": 0,
-            "markersize": 3.2 if self.marker in "osD" else 4.2,
+            "markersize": 3.2 if self.marker == "o" else 3.8,
         }
 
 
@@ -178,7 +190,8 @@ def readings_of(fit: GapFit) -> list[Readings]:
         points = [point for point in series.excluded if point.reason == reason]
         columns = np.array([[p.temperature, p.value, p.error] for p in points], float).T
         marker = EXCLUDED_MARKERS[index % len(EXCLUDED_MARKERS)]
-        groups.append(Readings(f"excluded: {reason}", marker, False, *columns))
+        label = reason if reason.startswith("excluded") else f"excluded: {reason}"
+        groups.append(Readings(label, marker, False, *columns))
     return [group for group in groups if group.temperature.size]
 
 
@@ -239,8 +252,9 @@ def draw_readings(axes: Axes, groups: list[Readings], against: Against) -> None:
 
 def _draw_missing(axes: Axes, group: Readings, x: FloatArray) -> None:
     """Points without a reading: their marker on the lower edge, at their temperature."""
-    look = {"markersize": 4.2, "linestyle": "none", "clip_on": False, "zorder": 6}
-    axes.plot(x, 0 * x, transform=axes.get_xaxis_transform(), marker=group.marker, color=BLACK, **look)
+    look = group.look
+    style = {name: look[name] for name in ("marker", "color", "markerfacecolor", "markersize", "linestyle")}
+    axes.plot(x, 0 * x, transform=axes.get_xaxis_transform(), clip_on=False, zorder=6, **style)
 
 
 def draw_band(axes: Axes, curves: PosteriorCurves, against: Against) -> None:
@@ -290,13 +304,15 @@ def draw_line(axes: Axes, fit: GapFit, scale: ReadingScale) -> None:
     axes.plot(inverse, y, color=GREY, linewidth=0.7, linestyle=(0, (3, 3)), zorder=1.5, label=label)
 
 
-def legend_entries(axes: Axes, scale: ReadingScale) -> dict[str, Any]:
+def legend_entries(axes: Axes, scale: ReadingScale, prefix: str = "") -> dict[str, Any]:
     """Handles by label: readings, posterior, contributions, straight line, linear part of the scale.
 
     Parameters
     ----------
     axes : Axes
     scale : ReadingScale
+    prefix : str
+        Unit of what the readings were multiplied by.
 
     Returns
     -------
@@ -310,7 +326,9 @@ def legend_entries(axes: Axes, scale: ReadingScale) -> dict[str, Any]:
     line = {label: handle for label, handle in found.items() if label.startswith(LINE)}
     known = {*readings, *line, *BAND_NAMES, MEDIAN}
     parts = {label: handle for label, handle in found.items() if label not in known}
-    linear = {scale.words(): Patch(facecolor="#f3f3f3", edgecolor="#9a9a9a")} if scale.linear_below else {}
+    linear = (
+        {scale.words(prefix): Patch(facecolor=LINEAR_GREY, edgecolor="#9a9a9a")} if scale.linear_below else {}
+    )
     return readings | linear | median | parts | line
 
 

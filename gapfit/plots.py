@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -10,7 +12,6 @@ from gapfit.fit import GapFit
 from gapfit.marginals import corner_figure, window_map_figure
 from gapfit.measured import density_figure, traces_figure, width_figure
 from gapfit.panels import (
-    BAND_NAMES,
     MEDIAN,
     QUANTILES,
     Against,
@@ -18,6 +19,7 @@ from gapfit.panels import (
     draw_band,
     draw_parts,
     draw_readings,
+    has_gap,
     head,
     legend_entries,
     posterior_curves,
@@ -49,7 +51,6 @@ from gapfit.style import (
     place,
     save_figure,
     set_height,
-    size_mm,
     styled,
 )
 from gapfit.surveys import gap_across_figure, gaps_figure, overview_figure
@@ -75,8 +76,16 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 SEEN = 2.0
-LARGEST_LOG_ERROR = 0.5
+KNOWN_SHARE = 0.9
+DIFFERENCES: dict[str, Any] = {
+    "marker": "o", "markersize": 3.2, "color": BLACK, "markerfacecolor": "white", "linestyle": "none",
+    "elinewidth": 0.7, "zorder": 4,
+}  # fmt: skip
+GAP_STRIP: dict[str, Any] = {
+    "facecolor": "none", "edgecolor": GREY, "hatch": "//////", "linewidth": 0.5,
+}  # fmt: skip
 HEAD_MM = 13.5
+ROOTS = (2, 3)
 
 
 # ----------------------------------------------------------------------------------------------- local slope
@@ -97,7 +106,7 @@ def finite_differences(series: TemperatureSeries) -> tuple[FloatArray, FloatArra
     """
     temperature, value, error = _by_temperature(series)
     seen = value > SEEN * error
-    inverse, height, spread = 1 / temperature[seen], np.log(value[seen]), (error / value)[seen]
+    inverse, height, spread = 1 / temperature[seen], np.log(value[seen]), error[seen] / value[seen]
     step = np.diff(inverse)
     gap = -2 * np.diff(height) / step
     return 2 / (inverse[1:] + inverse[:-1]), gap, np.abs(2 * np.hypot(spread[1:], spread[:-1]) / step)
@@ -107,7 +116,8 @@ def _by_temperature(series: TemperatureSeries) -> tuple[FloatArray, FloatArray, 
     """Weighted means of readings at equal temperatures."""
     temperature, index = np.unique(series.temperature, return_inverse=True)
     weight = np.bincount(index, 1 / series.error**2)
-    return temperature, np.bincount(index, series.value / series.error**2) / weight, weight**-0.5
+    mean = np.bincount(index, series.value / series.error**2) / weight
+    return temperature, mean, np.asarray(1 / np.sqrt(weight))
 
 
 @styled
@@ -124,37 +134,40 @@ def local_slope_figure(fit: GapFit, width_mm: float = ONE_COLUMN_MM) -> Figure:
     -------
     Figure
     """
-    grid = temperature_grid(fit.series, 1.02)
+    grid, bands = _local_gap(fit)
+    temperature, gap, error = finite_differences(fit.series)
+    figure = new_figure(width_mm, 20.0)
+    axes = figure.add_subplot()
+    outer = axes.fill_between(grid, bands[0], bands[4], color=BAND_95, linewidth=0)
+    inner = axes.fill_between(grid, bands[1], bands[3], color=BAND_68, linewidth=0)
+    (median,) = axes.plot(grid, bands[2], color=BLUE, linewidth=1.2)
+    points = axes.errorbar(temperature, gap, error, **DIFFERENCES)
+    entries: dict[str, Any] = {"neighbouring readings": points} if gap.size else {}
+    entries |= {MEDIAN: median, "68 and 95 % bands": (inner, outer)}
+    if has_gap(fit):
+        ends = fit.gap.interval(0.68)
+        entries["gap, 68 % interval"] = axes.axhspan(ends.low, ends.high, **GAP_STRIP)
+    axes.axhline(0.0, color=GREY, linewidth=0.5, zorder=0)
+    axes.set_ylim(*_slope_limits(bands, gap, error))
+    room, height = width_mm - LEFT_MM - RIGHT_MM, 52.0
+    temperature_axis(axes, fit.series.temperature[0] / 1.03, fit.series.temperature[-1] * 1.03, room)
+    foot = legend_below(figure, entries)
+    set_height(figure, foot + 9.0 + height + HEAD_MM)
+    place(axes, LEFT_MM, foot + 9.0, room, height)
+    y = rf"local gap $-2\,$d$\,$ln$\,{symbol_of(fit.series)}\,/\,$d$(1/T)$ (K)"
+    label_axes(axes, "temperature (K)", y)
+    head(figure, fit)
+    return figure
+
+
+def _local_gap(fit: GapFit) -> tuple[FloatArray, FloatArray]:
+    """Temperatures and quantiles of the local gap, where nearly all draws of the reading are above zero."""
+    grid = temperature_grid(fit.series, 1.03)
     curve = fit.curves(grid)
     with np.errstate(divide="ignore", invalid="ignore"):
         local = np.where(curve.total > 0, 2 * grid * curve.slope / curve.total, np.nan)
-    known = np.isfinite(local).mean(axis=0) > 0.9
-    bands = np.nanquantile(local[:, known], QUANTILES, axis=0)
-    figure = new_figure(width_mm, 20.0)
-    axes = figure.add_subplot()
-    axes.fill_between(grid[known], bands[0], bands[4], color=BAND_95, linewidth=0, label=BAND_NAMES[1])
-    axes.fill_between(grid[known], bands[1], bands[3], color=BAND_68, linewidth=0, label=BAND_NAMES[0])
-    axes.plot(grid[known], bands[2], color=BLUE, linewidth=1.2, label=MEDIAN)
-    temperature, gap, error = finite_differences(fit.series)
-    look = {"marker": "o", "markersize": 3.2, "color": BLACK, "markerfacecolor": "white", "linestyle": "none"}
-    axes.errorbar(temperature, gap, error, label="neighbouring readings", elinewidth=0.7, zorder=4, **look)
-    entries = {"neighbouring readings": axes.containers[0], MEDIAN: axes.lines[0]}
-    entries["68 and 95 % bands"] = tuple(axes.collections[1::-1])
-    if fit.gap.draws.size:
-        low, high = fit.gap.interval(0.68).low, fit.gap.interval(0.68).high
-        entries["gap, 68 % interval"] = axes.axhspan(
-            low, high, facecolor="none", edgecolor=GREY, hatch="//////", linewidth=0.5
-        )
-    axes.axhline(0.0, color=GREY, linewidth=0.5, zorder=0)
-    axes.set_ylim(*_slope_limits(bands, gap, error))
-    temperature_axis(axes, float(grid[0]), float(grid[-1]), width_mm - LEFT_MM - RIGHT_MM)
-    foot = legend_below(figure, entries)
-    set_height(figure, foot + 9.0 + 52.0 + HEAD_MM)
-    place(axes, LEFT_MM, foot + 9.0, width_mm - LEFT_MM - RIGHT_MM, 52.0)
-    y = rf"local gap $-2\,$d$\,$ln$\,{symbol_of(fit.series)}\,/\,$d$(1/T)$ (K)"
-    label_axes(axes, r"temperature $T$ (K)", y)
-    head(figure, fit)
-    return figure
+    known = np.isfinite(local).mean(axis=0) > KNOWN_SHARE
+    return grid[known], np.nanquantile(local[:, known], QUANTILES, axis=0)
 
 
 def _slope_limits(bands: FloatArray, gap: FloatArray, error: FloatArray) -> tuple[float, float]:
@@ -184,14 +197,11 @@ def hopping_figure(fit: GapFit, width_mm: float = TWO_COLUMNS_MM) -> Figure:
     Figure
     """
     series, power = fit.series, fit.problem.reference.hopping_power
-    scale, curves = reading_scale(series, power), posterior_curves(fit)
-    groups = readings_of(fit)
+    scale, curves, groups = reading_scale(series, power), posterior_curves(fit), readings_of(fit)
     figure = new_figure(width_mm, 20.0)
-    beside = width_mm > 120
-    panels = [figure.add_subplot() for _ in range(2)]
-    room = (width_mm - LEFT_MM - RIGHT_MM - (LEFT_MM if beside else 0)) / (2 if beside else 1)
-    for axes, exponent in zip(panels, (1 / 2, 1 / 3), strict=True):
-        against = Against(scale, exponent, power)
+    panels = [figure.add_subplot() for _ in ROOTS]
+    for axes, root in zip(panels, ROOTS, strict=True):
+        against = Against(scale, 1 / root, power)
         draw_band(axes, curves, against)
         draw_parts(axes, curves, fit, against)
         draw_readings(axes, groups, against)
@@ -199,31 +209,25 @@ def hopping_figure(fit: GapFit, width_mm: float = TWO_COLUMNS_MM) -> Figure:
         margin = 0.03 * float(np.ptp(x))
         axes.set_xlim(x.min() - margin, x.max() + margin)
         scale.apply(axes)
-    foot = legend_below(
-        figure, legend_entries(panels[0], scale), best_words(fit, 140 if beside else 66), 4 if beside else 2
-    )
-    height, base = 50.0, foot + 9.0
-    set_height(figure, base + (1 if beside else 2) * (height + 9.5) + (0 if beside else 9.5) + HEAD_MM - 1)
-    for index, (axes, root) in enumerate(zip(panels, ("2", "3"), strict=True)):
-        left = LEFT_MM + (index * (room + LEFT_MM) if beside else 0)
-        bottom = base if beside else base + (1 - index) * (height + 18.0)
-        place(axes, left, bottom, room, height)
-        temperature_ticks_above(axes, 1 / int(root), room)
-        name = rf"T^{{{power:g}}}\," if power not in (0, 1) else "T\\," if power else ""
-        unit = f"K$^{{{power:g}}}$ " if power not in (0, 1) else "K " if power else ""
-        label_axes(
-            axes,
-            rf"$T^{{-1/{root}}}$ (K$^{{-1/{root}}}$)",
-            rf"${name}{symbol_of(series)}$ ({unit}{scale.unit.name})",
-        )
-        width, up = size_mm(figure)
-        figure.text(
-            (left + room / 2) / width,
-            (bottom + height + 3.9) / up,
-            r"temperature $T$ (K)",
-            ha="center",
-            va="bottom",
-            fontsize=8.0,
-        )
+    symbol, unit = _times_power(power)
+    beside, height = width_mm > 120, 50.0
+    words = best_words(fit, 140 if beside else 66)
+    foot = legend_below(figure, legend_entries(panels[0], scale, unit), words, 4 if beside else 2)
+    lines, step = (1 if beside else 2), height + 18.0
+    set_height(figure, foot + 9.0 + lines * step - 9.5 + HEAD_MM)
+    room = width_mm / (2 if beside else 1) - LEFT_MM - RIGHT_MM
+    for index, (axes, root) in enumerate(zip(panels, ROOTS, strict=True)):
+        left = LEFT_MM + (index * width_mm / 2 if beside else 0.0)
+        place(axes, left, foot + 9.0 + (0.0 if beside else (1 - index) * step), room, height)
+        temperature_ticks_above(axes, 1 / root, room, title=True)
+        y = rf"${symbol}{symbol_of(series)}$ ({unit}{scale.unit.name})"
+        label_axes(axes, rf"$T^{{-1/{root}}}$ (K$^{{-1/{root}}}$)", y)
     head(figure, fit)
     return figure
+
+
+def _times_power(power: float) -> tuple[str, str]:
+    """Symbol and unit of T^m, to stand before those of a reading."""
+    if power in (0.0, 1.0):
+        return ("T\\,", "K ") if power else ("", "")
+    return rf"T^{{{power:g}}}\,", f"K$^{{{power:g}}}$ "

@@ -7,12 +7,20 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from matplotlib.markers import TICKDOWN, TICKRIGHT, TICKUP
-from matplotlib.ticker import FixedFormatter, FixedLocator, NullLocator
 from numpy.typing import ArrayLike, NDArray
 
 from gapfit.series import TemperatureSeries
-from gapfit.style import GREY, Axes
+from gapfit.style import (
+    GREY,
+    LINEAR_GREY,
+    TICKDOWN,
+    TICKRIGHT,
+    TICKUP,
+    Axes,
+    FixedFormatter,
+    FixedLocator,
+    NullLocator,
+)
 
 __all__ = [
     "MARKS_MM",
@@ -76,7 +84,7 @@ def reading_unit(values: ArrayLike, quantity: str) -> AxisUnit:
     """
     largest = float(np.abs(np.asarray(values, float)).max(initial=0.0))
     exponent = 3 * int(np.floor(np.log10(largest) / 3 + 1e-9)) if largest > 0 else 0
-    if quantity == "rho_xx" and 1.0 <= largest < 1e4:
+    if quantity == "rho_xx" and 0.1 <= largest < 1e4:
         exponent = 0
     exponent = min(max(exponent, min(_PREFIXES)), max(_PREFIXES))
     return AxisUnit(_PREFIXES[exponent] + ("Ω" if quantity == "rho_xx" else "S"), 10.0**exponent)
@@ -114,7 +122,7 @@ class ReadingScale:
         """Give axes this scale on the y axis, with ticks and plain numbers unless they are to be bare."""
         if self.linear_below:
             axes.set_yscale("symlog", linthresh=self.linear_below, linscale=0.8)
-            axes.axhspan(-self.linear_below, self.linear_below, color="#f3f3f3", linewidth=0, zorder=0)
+            axes.axhspan(-self.linear_below, self.linear_below, color=LINEAR_GREY, linewidth=0, zorder=0)
             axes.axhline(0.0, color="#9a9a9a", linewidth=0.5, zorder=0.5)
         else:
             axes.set_yscale("log")
@@ -129,15 +137,15 @@ class ReadingScale:
         down: list[float] = []
         if self.low < -self.linear_below:
             down = [-tick for tick in logarithmic_ticks(self.linear_below, -self.low, False)[0]]
-        spare = [tick for tick in up if tick > 1.9 * self.linear_below]
+        spare = [tick for tick in up if tick > 2.9 * self.linear_below]
         major = sorted({0.0, self.linear_below, *spare, *down})
         if self.low <= -self.linear_below:
             major = sorted({-self.linear_below, *major})
         return major, up_minor
 
-    def words(self) -> str:
-        """What a legend says about the linear part."""
-        return f"linear scale below {plain_number(self.linear_below)} {self.unit.name}"
+    def words(self, prefix: str = "") -> str:
+        """What a legend says about the linear part; the prefix stands before the unit."""
+        return f"linear scale below {plain_number(self.linear_below)} {prefix}{self.unit.name}"
 
 
 def reading_scale(
@@ -253,7 +261,7 @@ def set_ticks(
         axes.plot(edge, minor, transform=axes.get_yaxis_transform(), marker=TICKRIGHT, **look)
 
 
-def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float) -> None:
+def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float, title: bool = False) -> None:
     """Ticks of temperature along the top, for axes whose x is a negative power of temperature.
 
     Parameters
@@ -264,6 +272,8 @@ def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float) -> Non
         x = T^-exponent.
     width_mm : float, mm
         Width of the axes, so that labels keep apart.
+    title : bool
+        Whether to write what the ticks are.
     """
     low, high = axes.get_xlim()
     cold, warm = high ** (-1 / exponent), max(low, 1e-3 * high) ** (-1 / exponent)
@@ -282,6 +292,11 @@ def temperature_ticks_above(axes: Axes, exponent: float, width_mm: float) -> Non
         axes.annotate(
             plain_number(tick), (place, 1.0), (0, 2.2), xycoords=at_top, textcoords="offset points",
             ha="center", va="bottom", annotation_clip=False,
+        )  # fmt: skip
+    if title:
+        axes.annotate(
+            "temperature (K)", (0.5, 1.0), (0, 3.9 * POINTS_PER_MM), xycoords="axes fraction",
+            textcoords="offset points", ha="center", va="bottom", fontsize=8.0, annotation_clip=False,
         )  # fmt: skip
 
 

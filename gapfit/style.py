@@ -1,7 +1,7 @@
 """The frozen look of every figure, and the ways out of a figure: PNG, PDF and SVG text.
 
-Everything that is drawn goes through `styled`, so that no setting of the user's matplotlib changes a figure.
-Places on a figure are given in millimetres of the printed page.
+Everything that is drawn goes through `styled`, so that no setting of the user's matplotlib changes a figure;
+other modules take what they need of matplotlib from here. Places on a figure are given in millimetres of the printed page.
 """
 
 from __future__ import annotations
@@ -19,10 +19,16 @@ import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.colors import ListedColormap
+from matplotlib.cm import ScalarMappable
+from matplotlib.colors import ListedColormap, LogNorm, Normalize
+from matplotlib.container import ErrorbarContainer
 from matplotlib.figure import Figure
 from matplotlib.legend_handler import HandlerTuple
+from matplotlib.lines import Line2D
+from matplotlib.markers import TICKDOWN, TICKRIGHT, TICKUP
+from matplotlib.patches import Patch
 from matplotlib.path import Path as Outline
+from matplotlib.ticker import FixedFormatter, FixedLocator, MaxNLocator, NullLocator
 from numpy.typing import ArrayLike, NDArray
 
 __all__ = [
@@ -30,10 +36,23 @@ __all__ = [
     "ONE_COLUMN_MM",
     "PART_LOOK",
     "SERIES_LOOK",
+    "TICKDOWN",
+    "TICKRIGHT",
+    "TICKUP",
     "TWO_COLUMNS_MM",
     "UPPER_LIMIT",
     "Axes",
+    "ErrorbarContainer",
     "Figure",
+    "FixedFormatter",
+    "FixedLocator",
+    "Line2D",
+    "LogNorm",
+    "MaxNLocator",
+    "Normalize",
+    "NullLocator",
+    "Patch",
+    "ScalarMappable",
     "figure_svg",
     "label_axes",
     "legend_below",
@@ -61,10 +80,11 @@ TWO_COLUMNS_MM = 178.0
 LEFT_MM, RIGHT_MM = 13.0, 3.0
 MM_PER_INCH = 25.4
 PNG_DPI = 220
+OPTIONS: dict[str, dict[str, Any]] = {"png": {"pil_kwargs": {"compress_level": 4}}, "pdf": {}}
 
 BLACK, GREY, BLUE = "#000000", "#767676", "#0b5fa5"
 BAND_95, BAND_68 = "#d3e3f1", "#9dc1e0"
-TWIN_GREY = "#f1f1f1"
+LINEAR_GREY = "#f3f3f3"
 
 PART_LOOK: dict[str, dict[str, Any]] = {
     "activation": {"color": "#b34700", "linestyle": (0, (5, 1.6))},
@@ -106,7 +126,7 @@ _OWN = {
     "axes.linewidth": 0.6,
     "axes.labelpad": 2.5,
     "axes.unicode_minus": True,
-    "axes.formatter.use_mathtext": True,
+    "axes.formatter.use_mathtext": False,
     "xtick.labelsize": 7.0,
     "ytick.labelsize": 7.0,
     "xtick.direction": "in",
@@ -148,7 +168,7 @@ _OWN = {
     "svg.hashsalt": "gapfit",
     "svg.id": None,
 }
-_STYLE = {
+_STYLE: dict[Any, Any] = {
     key: value for key, value in matplotlib.rcParamsDefault.items() if not key.startswith("backend")
 } | {key: value for key, value in _OWN.items() if key in matplotlib.rcParamsDefault}
 
@@ -244,6 +264,9 @@ def legend_below(
         handler_map={tuple: HandlerTuple(ndivide=None, pad=0.0)},
     )
     box = legend.get_window_extent(figure.canvas.get_renderer())  # type: ignore[attr-defined]
+    if columns > 1 and box.width / figure.dpi * MM_PER_INCH > width - left_mm - 0.5:
+        legend.remove()
+        return legend_below(figure, entries, title, columns - 1, left_mm)
     return float(box.height / figure.dpi * MM_PER_INCH) + 1.2
 
 
@@ -334,7 +357,7 @@ def save_figure(figure: Figure, folder: str | Path, name: str) -> tuple[Path, Pa
     for kind, record in metadata.items():
         path, draft = folder / f"{name}.{kind}", folder / f".{name}.{os.getpid()}.{kind}"
         try:
-            figure.savefig(draft, format=kind, dpi=PNG_DPI, metadata=record)
+            figure.savefig(draft, format=kind, dpi=PNG_DPI, metadata=record, **OPTIONS[kind])
             os.replace(draft, path)
         finally:
             draft.unlink(missing_ok=True)

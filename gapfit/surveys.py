@@ -6,8 +6,6 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
-from matplotlib.lines import Line2D
-from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from gapfit.arrhenius import inverse_temperature_spans
@@ -32,8 +30,8 @@ from gapfit.scales import (
     AxisUnit,
     filling_marks,
     logarithmic_ticks,
-    reading_scale,
     plain_number,
+    reading_scale,
     reading_unit,
     set_ticks,
     symbol_of,
@@ -51,6 +49,8 @@ from gapfit.style import (
     UPPER_LIMIT,
     Axes,
     Figure,
+    Line2D,
+    MaxNLocator,
     label_axes,
     legend_below,
     new_figure,
@@ -118,7 +118,7 @@ def overview_figure(fits: Sequence[GapFit], width_mm: float = TWO_COLUMNS_MM) ->
             label_axes(
                 axes, None, rf"${symbol_of(fit.series)}$ ({units[fit.series.quantity].name})", y_mm=9.0
             )
-    words = r"inverse temperature $1/T$ (K$^{-1}$); above: temperature $T$ (K)"
+    words = "inverse temperature 1/T (K⁻¹); above: temperature (K)"
     figure.text(0.5, (foot + 0.9) / height, words, fontsize=8.0, ha="center", va="bottom")
     figure.text(1 - RIGHT_MM / width, 1 - 1.0 / height, CONVENTION, ha="right", va="top")
     return figure
@@ -181,8 +181,8 @@ def gaps_figure(
     fits : sequence of GapFit
         At least one.
     permittivity : float, optional
-        Relative permittivity for gaps in units of the Coulomb scale: a second axis on the right where all fits
-        share a field, else a second panel. Neither without it.
+        Relative permittivity, for gaps in units of the Coulomb scale: a second axis on the right where all
+        fits share a field, else a second panel. Neither without it.
     against : {"filling", "field"}
         What is on the x axis.
     width_mm : float, mm
@@ -216,8 +216,8 @@ def gaps_figure(
         place(axes, LEFT_MM, base + (len(panels) - 1 - index) * (tall + 1.5), room, tall)
         axes.tick_params(labelbottom=index == len(panels) - 1)
         axes.set_xlim(panels[0].get_xlim())
-    name = r"filling factor $\nu$" if against == "filling" else "magnetic field $B$ (T)"
-    label_axes(panels[0], None, r"gap $\Delta$ (K)")
+    name = "filling factor" if against == "filling" else "magnetic field (T)"
+    label_axes(panels[0], None, "gap (K)")
     label_axes(panels[-1], name, _coulomb_label(permittivity) if second else None)
     if right > RIGHT_MM and permittivity is not None:
         _right_axis(panels[0], coulomb_scale(float(fields.mean()), permittivity), permittivity, room)
@@ -343,8 +343,13 @@ def _gap_legend(fits: Sequence[GapFit], groups: Mapping[str, Sequence[GapFit]]) 
 def _right_axis(axes: Axes, scale: float, permittivity: float, width_mm: float) -> None:
     """Second axis on the right in units of the Coulomb scale."""
     twin = axes.twinx()
-    twin.set_ylim(np.array(axes.get_ylim()) / scale)
-    twin.yaxis.set_major_locator(MaxNLocator(5))
+    low, high = axes.get_ylim()
+    twin.set_yscale(axes.get_yscale())
+    twin.set_ylim(low / scale, high / scale)
+    ticks = logarithmic_ticks(low / scale, high / scale)[0]
+    if axes.get_yscale() == "linear":
+        ticks = [t for t in MaxNLocator(5).tick_values(low / scale, high / scale) if t <= high / scale]
+    set_ticks(twin, "y", ticks, [plain_number(tick) for tick in ticks])
     twin.set_ylabel(_coulomb_label(permittivity))
     twin.yaxis.set_label_coords(1 + 8.5 / width_mm, 0.5)
 
@@ -398,7 +403,7 @@ def gap_across_figure(
     set_height(figure, foot + 9.0 + 44.0 + 5.0)
     place(axes, LEFT_MM, foot + 9.0, width_mm - LEFT_MM - RIGHT_MM, 44.0)
     axes.xaxis.set_major_locator(MaxNLocator(6 if width_mm < 120 else 9))
-    label_axes(axes, r"distance from the exact filling, $\nu - \nu_0$", r"gap $\Delta$ (K)")
+    label_axes(axes, "distance from the exact filling factor", "gap (K)")
     width, height = size_mm(figure)
     figure.text(1 - RIGHT_MM / width, 1 - 1.0 / height, CONVENTION, ha="right", va="top")
     return figure
