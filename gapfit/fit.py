@@ -39,6 +39,7 @@ if TYPE_CHECKING:
 __all__ = [
     "FitSettings",
     "GapFit",
+    "candidates",
     "fit_series",
     "fit_temperature_series",
 ]
@@ -342,9 +343,7 @@ def fit_temperature_series(series: TemperatureSeries, settings: FitSettings) -> 
     """
     if settings.engine not in ("mcmc", "fast"):
         raise InputError(f"unknown engine {settings.engine!r}; allowed are 'mcmc' and 'fast'")
-    combinations = settings.combinations
-    if combinations is None:
-        combinations = combinations_for(np.isfinite(series.background))
+    combinations = candidates(series, settings)
     if not combinations:
         raise InputError("no combination of mechanisms is given; name at least one, such as 'activation'")
     problem = _problem(series, settings)
@@ -372,6 +371,23 @@ def fit_temperature_series(series: TemperatureSeries, settings: FitSettings) -> 
         (),
     )
     return replace(fit, flags=_flags(fit))
+
+
+def candidates(series: TemperatureSeries, settings: FitSettings) -> tuple[Combination, ...]:
+    """Combinations that are averaged for a series: the user's, or the default ones.
+
+    Parameters
+    ----------
+    series : TemperatureSeries
+    settings : FitSettings
+
+    Returns
+    -------
+    tuple of Combination
+    """
+    if settings.combinations is not None:
+        return settings.combinations
+    return combinations_for(bool(np.isfinite(series.background)))
 
 
 def _problem(series: TemperatureSeries, settings: FitSettings) -> Problem:

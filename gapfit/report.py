@@ -14,7 +14,7 @@ from markupsafe import Markup
 from gapfit.diagnostics import LARGEST_PARETO_K, LARGEST_RHAT, SMALLEST_ESS
 from gapfit.digest import WITHOUT_GAP, WholeRange, fitted_parameters, flag_words
 from gapfit.errors import InputError
-from gapfit.fit import GapFit
+from gapfit.fit import GapFit, candidates
 from gapfit.hall import filling_label
 from gapfit.intervals import Marginal
 from gapfit.mechanisms import PARAMETERS, Parameter, parse_combination
@@ -386,7 +386,7 @@ def _methods(fits: Sequence[GapFit]) -> dict[str, Any]:
     return {
         "settings": settings,
         "rules": asdict(settings.rules) if settings else {},
-        "combinations": [item.label for item in settings.combinations] if settings else [],
+        "combinations": [item.label for item in candidates(fits[0].series, settings)] if settings else [],
         "student_degrees": f"{STUDENT_DEGREES:g}",
         "largest_rhat": LARGEST_RHAT,
         "smallest_ess": f"{SMALLEST_ESS:g}",
