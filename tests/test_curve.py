@@ -22,6 +22,7 @@ from gapfit.mechanisms import (
     nearest_neighbour,
     parse_combination,
     power_mean,
+    roll_over,
 )
 
 T = np.geomspace(0.1, 3.0, 12)
@@ -34,6 +35,8 @@ EVERY = (
             "activation + fermi",
             "activation + fermi + es + leak + heating",
             "activation + fermi + spread",
+            "activation + power mean",
+            "activation + power mean + es + heating",
             "activation + spread",
             "activation + roll-over + spread + heating",
             "activation + nearest",
@@ -51,6 +54,8 @@ CENTRES = {
     "activated": np.log(200.0),
     "background": np.log(900.0),
     "sharpness": 0.35,
+    "saturation": 0.3,
+    "background_slope": 0.05,
     "hopping": np.log(2.0),
     "hopping_T0_K": np.log(15.0),
     "nearest": np.log(1.5),
@@ -63,6 +68,7 @@ CENTRES = {
     "spread": np.log(0.07),
     "inflation": 0.0,
 }
+NARROWED = {"background_slope": 0.1}
 
 every_combination = pytest.mark.parametrize("combination", EVERY, ids=lambda item: item.name)
 
@@ -72,7 +78,8 @@ def draws(combination, n_draw=5, seed=0, width=0.6):
     rng = np.random.default_rng(seed)
     full = np.repeat(combination.base[None], n_draw, axis=0)
     for slot in combination.slots:
-        full[:, slot] = CENTRES[PARAMETERS[slot].name] + width * rng.standard_normal(n_draw)
+        name = PARAMETERS[slot].name
+        full[:, slot] = CENTRES[name] + NARROWED.get(name, 1.0) * width * rng.standard_normal(n_draw)
     return full
 
 
@@ -92,8 +99,13 @@ def by_laws(coordinates, combination, temperature, reference=REFERENCE):
         gap, s = value["gap_K"], value["gap_K"] * value.get("spread", 0.0)
         prefactor = value["activated"] * np.exp(gap / (2 * high) - s**2 / (8 * high**2))
         parts["activation"] = activation(hot, gap, prefactor) * np.exp(s**2 / (8 * hot**2))
-        if "roll-over" in has:
+        if "power mean" in has:
             parts["activation"] = power_mean(parts["activation"], value["background"], value["sharpness"])
+        if "roll-over" in has:
+            flank = value["background"] * np.exp(value["background_slope"] * (temperature / high - 1))
+            parts["activation"] = roll_over(
+                parts["activation"], flank, value["sharpness"], value["saturation"]
+            )
         if "fermi" in has:
             parts["activation"] = power_mean(parts["activation"], prefactor, 1.0)
     for name, law, exponent in (("es", efros_shklovskii, 1 / 2), ("mott", mott, 1 / 3)):
@@ -132,7 +144,7 @@ def test_jacobian_against_finite_differences(combination):
         shift = step * (np.arange(len(PARAMETERS)) == slot)
         above, below = (evaluate(coordinates + sign * shift, T, REFERENCE).total for sign in (1, -1))
         expected = (above - below) / (2 * step)
-        scale = np.abs(evaluate(coordinates, T, REFERENCE).total)
+        scale = sum(np.abs(part) for part in evaluate(coordinates, T, REFERENCE).parts.values())
         np.testing.assert_allclose(
             matrix[:, :, slot] / scale, expected / scale, rtol=2e-6, atol=1e-8, err_msg=PARAMETERS[slot].name
         )
@@ -184,10 +196,12 @@ def test_kelvin_or_millikelvin_gives_the_same_curve(combination):
 @every_combination
 @given(st.integers(0, 2**32 - 1))
 def test_nothing_negative_without_offset_and_activation_rises_on_heating(combination, seed):
-    """Activation, closed or not, never falls on heating unless its local gaps are spread."""
+    """Activation, closed at a steady level or not, never falls on heating unless gaps are spread."""
     if "offset" in combination.mechanisms or "spread" in combination.mechanisms:
         return
-    curve = evaluate(draws(combination, seed=seed, width=1.5), T, REFERENCE)
+    coordinates = draws(combination, seed=seed, width=1.5)
+    coordinates[:, SLOT["background_slope"]] = 0.0
+    curve = evaluate(coordinates, T, REFERENCE)
     assert (curve.total >= 0).all()
     assert (np.diff(curve.parts["activation"]) >= 0).all()
 
@@ -207,7 +221,7 @@ def test_fermi_form_is_the_closure_with_its_own_prefactor_as_background():
     """2 A / (1 + exp(Delta/2T)) with 2 A the prefactor at 1/T = 0."""
     tied = one("activation + fermi", gap_K=np.log(4.0))
     prefactor = np.exp(log_prefactor(tied, REFERENCE))[0]
-    free = one("activation + roll-over", gap_K=np.log(4.0), background=np.log(prefactor), sharpness=0.0)
+    free = one("activation + power mean", gap_K=np.log(4.0), background=np.log(prefactor), sharpness=0.0)
     expected = fermi(T, 4.0, prefactor / 2)
     np.testing.assert_allclose(evaluate(tied, T, REFERENCE).total[0], expected, rtol=1e-12)
     np.testing.assert_allclose(evaluate(free, T, REFERENCE).total[0], expected, rtol=1e-12)
@@ -251,10 +265,25 @@ def test_a_mechanism_switched_off_leaves_the_rest(text, plain, change):
     )
 
 
+def test_power_mean_is_the_roll_over_of_full_saturation():
+    mean = one("activation + power mean")
+    shaped = one("activation + roll-over", saturation=40.0, background_slope=0.0)
+    np.testing.assert_allclose(
+        evaluate(mean, T, REFERENCE).total, evaluate(shaped, T, REFERENCE).total, rtol=1e-10
+    )
+
+
+def test_background_follows_the_bath_not_the_electrons():
+    """Far above the flank level the curve is that level, whose slope is stated against T / T_h."""
+    vector = one("activation + roll-over + heating", activated=np.log(1e12), electron_T0_K=np.log(5.0))
+    expected = 900 * np.exp(0.05 * (T / REFERENCE.high_K - 1))
+    np.testing.assert_allclose(evaluate(vector, T, REFERENCE).total[0], expected, rtol=1e-6)
+
+
 def test_closure_limits():
     """Far below the background the curve is activated, far above it the curve is the background."""
     hot, cold = np.array([1e6]), np.array([0.12])
-    vector = one("activation + roll-over", activated=np.log(1e6))
+    vector = one("activation + power mean", activated=np.log(1e6))
     assert evaluate(vector, hot, REFERENCE).total[0, 0] == pytest.approx(900.0, rel=1e-4)
     vector = one("activation + roll-over", gap_K=np.log(6.0))
     np.testing.assert_allclose(

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from scipy.optimize import minimize
 
 from gapfit.errors import InputError
 from gapfit.mechanisms import (
@@ -16,6 +17,7 @@ from gapfit.mechanisms import (
     SLOT,
     Combination,
     activation,
+    combinations_for,
     efros_shklovskii,
     electron_temperature,
     fermi,
@@ -23,6 +25,7 @@ from gapfit.mechanisms import (
     nearest_neighbour,
     parse_combination,
     power_mean,
+    roll_over,
 )
 
 temperatures = st.floats(0.05, 10.0)
@@ -164,6 +167,53 @@ def test_power_mean_limits():
     assert power_mean(3.0, 1e12, 1.0) == pytest.approx(3.0, rel=1e-11)
 
 
+saturations = st.floats(1e-3, 1.0)
+
+
+@given(amplitudes, amplitudes, sharpnesses)
+def test_roll_over_of_full_saturation_is_the_power_mean(activated, background, k):
+    expected = float(power_mean(activated, background, k))
+    assert roll_over(activated, background, k, 1.0) == pytest.approx(expected, rel=1e-9)
+
+
+@given(st.floats(1e-4, 1e4))
+def test_roll_over_without_saturation_is_the_exponential(ratio):
+    """q to 0 at k = 1: background [1 - exp(-x)]."""
+    assert roll_over(3.0 * ratio, 3.0, 1.0, 1e-12) == pytest.approx(-3.0 * np.expm1(-ratio), rel=1e-9)
+
+
+@given(amplitudes, amplitudes, sharpnesses, saturations, st.floats(1.001, 10.0))
+def test_roll_over_lies_below_both_and_rises_with_both(activated, background, k, q, step):
+    value = float(roll_over(activated, background, k, q))
+    assert 0 < value <= min(activated, background) * (1 + 1e-12)
+    assert roll_over(step * activated, background, k, q) >= value * (1 - 1e-12)
+    assert roll_over(activated, step * background, k, q) >= value * (1 - 1e-12)
+    assert roll_over(step * activated, step * background, k, q) == pytest.approx(step * value, rel=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("shape", "most"),
+    [
+        (np.tanh, 0.01),
+        (lambda x: 2 / np.pi * np.arctan(np.pi / 2 * x), 0.035),
+        (lambda x: -np.expm1(-x), 1e-3),
+    ],
+    ids=["tanh", "arctan", "exponential"],
+)
+def test_roll_over_follows_shapes_that_it_was_not_made_of(shape, most):
+    """Largest relative distance from the nearest member, over two decades either side of the bend."""
+    x = np.geomspace(0.01, 100.0, 60)
+
+    def distance(parameters):
+        k, q = np.exp(parameters[0]), 1 / (1 + np.exp(-np.clip(parameters[1], -12, 12)))
+        return np.abs(roll_over(x, 1.0, k, q) / shape(x) - 1).max()
+
+    starts = [(k, q) for k in (0.0, 0.5, 1.0) for q in (-6.0, -1.0, 2.0)]
+    options = {"xatol": 1e-6, "fatol": 1e-8, "maxiter": 600}
+    best = min(minimize(distance, start, method="Nelder-Mead", options=options).fun for start in starts)
+    assert best < most
+
+
 @given(temperatures, st.floats(0.01, 2.0), st.floats(2.0, 6.0))
 def test_electron_temperature_lies_above_both(temperature, saturation, exponent):
     hot = float(electron_temperature(temperature, saturation, exponent))
@@ -230,6 +280,13 @@ def test_default_combinations():
     assert not any("nearest" in name or "spread" in name for name in names)
 
 
+def test_a_minimum_with_known_flanks_must_fill_in_towards_them():
+    assert combinations_for(background_known=False) == COMBINATIONS
+    known = combinations_for(background_known=True)
+    assert all("roll-over" in item.mechanisms for item in known if item.activated)
+    assert {item for item in COMBINATIONS if not item.activated} <= set(known)
+
+
 @pytest.mark.parametrize(
     ("text", "slots"),
     [
@@ -242,6 +299,8 @@ def test_default_combinations():
                 "activated",
                 "background",
                 "sharpness",
+                "saturation",
+                "background_slope",
                 "hopping",
                 "hopping_T0_K",
                 "leak",
@@ -267,6 +326,8 @@ def test_fitted_parameters_of_a_combination(text, slots):
         ("es + mott", "es and mott exclude"),
         ("activation + leak + offset", "leak and offset exclude"),
         ("activation + roll-over + fermi", "fermi and roll-over exclude"),
+        ("activation + roll-over + power mean", "power mean and roll-over exclude"),
+        ("activation + power mean + fermi", "fermi and power mean exclude"),
         ("activation + constant", "activation and constant exclude"),
         ("leak", "needs one of"),
         ("heating + offset", "needs one of"),

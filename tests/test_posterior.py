@@ -116,21 +116,28 @@ def test_unknown_noise_is_refused(series):
 
 
 def reading_by_reading(problem, vector):
-    """Log-likelihood of every reading through scipy.stats, zero for no misfit at the stated error."""
+    """Log-likelihood of every reading through scipy.stats, zero for no misfit at the stated errors.
+
+    The stated error of a temperature counts through the slope of a line through the neighbouring readings.
+    """
     series = problem.series
+    log_t = np.log(series.temperature)
     curve = problem.curve(vector[None])
     slope = np.broadcast_to(curve.slope, (1, series.n_point))[0]
     terms = []
     for index in range(series.n_point):
         stated = series.error[index]
-        by_temperature = slope[index] * series.temperature_error[index] / series.temperature[index]
-        sigma = np.sqrt((np.exp(vector[INFLATION]) * stated) ** 2 + by_temperature**2)
+        relative = series.temperature_error[index] / series.temperature[index]
+        sigma = np.hypot(np.exp(vector[INFLATION]) * stated, slope[index] * relative)
+        near = slice(max(0, index - 1), index + 2)
+        data_slope = np.polyfit(log_t[near], series.value[near], 1)[0]
+        expected = np.hypot(stated, data_slope * relative)
         misfit = series.value[index] - curve.total[0, index]
         if problem.student:
             law = stats.t(5, scale=module.STUDENT_SCALE * sigma)
-            perfect = stats.t(5, scale=module.STUDENT_SCALE * stated)
+            perfect = stats.t(5, scale=module.STUDENT_SCALE * expected)
         else:
-            law, perfect = stats.norm(scale=sigma), stats.norm(scale=stated)
+            law, perfect = stats.norm(scale=sigma), stats.norm(scale=expected)
         terms.append(law.logpdf(misfit) - perfect.logpdf(0.0))
     return np.array(terms)
 
