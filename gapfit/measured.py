@@ -217,7 +217,7 @@ def _draw_hall(axes: Axes, panel: _Panel, density: DensityEstimate) -> None:
         axes.plot(x, y, color=colour, linewidth=0.6)
     every = np.concatenate([np.asarray(sweep.rho_xy_ohm) for sweep in measured]) / 1e3
     low, high = np.quantile(every, (0.005, 0.995))
-    margin = 0.08 * (high - low)
+    margin = 0.08 * (high - low) or 1.0
     axes.set_ylim(low - margin, high + margin)
     axes.yaxis.set_major_locator(MaxNLocator(4, prune="lower"))
     axes.tick_params(labelbottom=False)

@@ -46,6 +46,7 @@ POINTS_PER_MM = 72 / 25.4
 MARKS_MM = 6.2
 """Room that `filling_marks` takes above axes, mm."""
 
+_RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 MINUS = "\N{MINUS SIGN}"
 NOT_SEEN = 2.0
 """A reading below this many standard errors calls for an axis that is linear near zero."""
@@ -148,17 +149,13 @@ class ReadingScale:
         return f"linear scale below {plain_number(self.linear_below)} {prefix}{self.unit.name}"
 
 
-def reading_scale(
-    series: TemperatureSeries, power: float = 0.0, unit: AxisUnit | None = None, coldest: float = 0.0
-) -> ReadingScale:
+def reading_scale(series: TemperatureSeries, power: float = 0.0, coldest: float = 0.0) -> ReadingScale:
     """Axis for the readings of a series times T^power, excluded ones included.
 
     Parameters
     ----------
     series : TemperatureSeries
     power : float
-    unit : AxisUnit, optional
-        The one that suits the readings otherwise.
     coldest : float, K
         Colder readings do not count.
 
@@ -172,7 +169,7 @@ def reading_scale(
     known = np.isfinite(value) & (temperature >= coldest)
     weight = temperature[known] ** power
     value, error = value[known] * weight, np.nan_to_num(error[known]) * weight
-    unit = reading_unit(value, series.quantity) if unit is None else unit
+    unit = reading_unit(value, series.quantity)
     value, error = value / unit.size, error / unit.size
     faint = value <= NOT_SEEN * error
     highest = float((value + error).max())
@@ -389,13 +386,13 @@ def filling_marks(axes: Axes, places: Sequence[float], labels: Sequence[str], wi
 
 
 def plain_number(value: float) -> str:
-    """A round number for a tick: ``0.05``, ``2000``, ``10⁶`` as mathtext beyond five digits."""
+    """A round number for a tick: ``0.05``, ``2000``, ``10⁶``, ``2×10⁻⁴``."""
     size = abs(value)
-    if value and (size >= 1e5 or size < 1e-4):
+    if value and (size >= 1e5 or size < 0.999e-3):
         exponent = int(np.floor(np.log10(size) + 1e-9))
-        lead = value / 10.0**exponent
-        head = "" if abs(abs(lead) - 1) < 1e-6 else rf"{abs(lead):g}\times "
-        return rf"${'-' if value < 0 else ''}{head}10^{{{exponent}}}$"
+        lead = f"{value / 10.0**exponent:.6g}"
+        head = {"1": "", "-1": "-"}.get(lead, f"{lead}×")
+        return f"{head}10".replace("-", MINUS) + str(exponent).translate(_RAISED)
     return f"{value:.6g}".replace("-", MINUS)
 
 

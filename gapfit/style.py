@@ -1,7 +1,7 @@
 """The frozen look of every figure, and the ways out of a figure: PNG, PDF and SVG text.
 
 Everything that is drawn goes through `styled`, so that no setting of the user's matplotlib changes a figure;
-other modules take what they need of matplotlib from here. Places on a figure are given in millimetres of the printed page.
+other modules take what they need of matplotlib from here. Places on a figure are in millimetres of the page.
 """
 
 from __future__ import annotations

@@ -27,7 +27,6 @@ from gapfit.panels import (
 from gapfit.scales import (
     MARKS_MM,
     MINUS,
-    AxisUnit,
     filling_marks,
     logarithmic_ticks,
     plain_number,
@@ -90,19 +89,20 @@ def overview_figure(fits: Sequence[GapFit], width_mm: float = TWO_COLUMNS_MM) ->
     Figure
         Where most readings would huddle on the left, the coldest lie outside of a panel, which says how many.
     """
-    units = _common_units(fits)
+    units = [reading_unit(fit.series.value, fit.series.quantity) for fit in fits]
+    names = [rf"${symbol_of(fit.series)}$ ({unit.name})" for fit, unit in zip(fits, units, strict=True)]
     figure = new_figure(width_mm, 20.0)
     panels = [figure.add_subplot() for _ in fits]
     entries: dict[str, Any] = {}
     for axes, fit in zip(panels, fits, strict=True):
-        entries = _small_panel(axes, fit, units[fit.series.quantity]) | entries
+        entries = _small_panel(axes, fit) | entries
     order = sorted(entries, key=lambda label: (label not in READINGS, label in LINEAR))
     foot = legend_below(
         figure, {label: entries[label] for label in order}, columns=2 if width_mm < 120 else 4
     )
     columns = _columns(len(fits), width_mm)
-    gap, above, base = 11.5, 11.5, foot + 9.0
-    tall = 30.0 if len(fits) <= 16 else 25.0
+    gap, above, base = 11.5, 14.0, foot + 9.0
+    tall = 30.0 if len(fits) <= 16 else 23.0
     room, block = (width_mm - RIGHT_MM - columns * gap) / columns, tall + above + 4.5
     set_height(figure, base + -(-len(fits) // columns) * block + 1.0)
     width, height = size_mm(figure)
@@ -114,10 +114,8 @@ def overview_figure(fits: Sequence[GapFit], width_mm: float = TWO_COLUMNS_MM) ->
         axes.xaxis.set_major_locator(MaxNLocator(4, steps=[1, 2, 2.5, 5, 10]))
         at = ((left - 2.0) / width, (bottom + tall + 4.2) / height)
         figure.text(*at, _small_title(fit), ha="left", va="bottom", fontsize=6.5, linespacing=1.15)
-        if index % columns == 0 or len(units) > 1:
-            label_axes(
-                axes, None, rf"${symbol_of(fit.series)}$ ({units[fit.series.quantity].name})", y_mm=9.0
-            )
+        if index % columns == 0 or len(set(names)) > 1:
+            label_axes(axes, None, names[index], y_mm=9.0)
     words = "inverse temperature 1/T (K⁻¹); above: temperature (K)"
     figure.text(0.5, (foot + 0.9) / height, words, fontsize=8.0, ha="center", va="bottom")
     figure.text(1 - RIGHT_MM / width, 1 - 1.0 / height, CONVENTION, ha="right", va="top")
@@ -130,19 +128,10 @@ def _columns(count: int, width_mm: float) -> int:
     return min(count, 3 if count <= 6 else 4 if count <= 16 else 5)
 
 
-def _common_units(fits: Sequence[GapFit]) -> dict[str, AxisUnit]:
-    """One unit for all readings of a quantity."""
-    quantities = dict.fromkeys(fit.series.quantity for fit in fits)
-    return {
-        name: reading_unit(np.concatenate([f.series.value for f in fits if f.series.quantity == name]), name)
-        for name in quantities
-    }
-
-
-def _small_panel(axes: Axes, fit: GapFit, unit: AxisUnit) -> dict[str, Any]:
+def _small_panel(axes: Axes, fit: GapFit) -> dict[str, Any]:
     """Readings and band of one fit; the handles by label."""
     span = inverse_temperature_spans(fit.series, ONE_COLUMN_MM)[0]
-    scale = reading_scale(fit.series, unit=unit, coldest=1 / span.high)
+    scale = reading_scale(fit.series, coldest=1 / span.high)
     grid = temperature_grid(fit.series)
     shown = grid[(1 / grid > span.low) & (1 / grid < span.high)][::2]
     draw_band(axes, posterior_curves(fit, shown, 300), Against(scale))
@@ -161,7 +150,7 @@ def _small_title(fit: GapFit) -> str:
     series = fit.series
     field = f", {series.field_T:.4g} T" if np.isfinite(series.field_T) else ""
     name = f"{filling_label(series.filling)}{field}".replace("-", MINUS)
-    return f"{name}: {fit.verdict}\n{answer(fit).removesuffix(' (68 %)')}"
+    return f"{name}\n{fit.verdict}\n{answer(fit).removesuffix(' (68 %)')}"
 
 
 # ------------------------------------------------------------------------------------------------------ gaps
@@ -346,9 +335,10 @@ def _right_axis(axes: Axes, scale: float, permittivity: float, width_mm: float) 
     low, high = axes.get_ylim()
     twin.set_yscale(axes.get_yscale())
     twin.set_ylim(low / scale, high / scale)
-    ticks = logarithmic_ticks(low / scale, high / scale)[0]
-    if axes.get_yscale() == "linear":
-        ticks = [t for t in MaxNLocator(5).tick_values(low / scale, high / scale) if t <= high / scale]
+    if axes.get_yscale() == "log":
+        ticks = logarithmic_ticks(low / scale, high / scale)[0]
+    else:
+        ticks = [tick for tick in MaxNLocator(5).tick_values(0.0, high / scale) if tick <= high / scale]
     set_ticks(twin, "y", ticks, [plain_number(tick) for tick in ticks])
     twin.set_ylabel(_coulomb_label(permittivity))
     twin.yaxis.set_label_coords(1 + 8.5 / width_mm, 0.5)
