@@ -219,7 +219,7 @@ def _with_text_columns(
 
 
 def _refuse_early_texts(lines: Sequence[str], layout: Layout, source: Path) -> None:
-    """Error if a row just above the first good one is a row of data with a text in it.
+    """Error if a row just above the first good one is a row of data with a text in it, or of other length.
 
     Without this it would pass for free text above the table and be lost.
     """
@@ -230,7 +230,9 @@ def _refuse_early_texts(lines: Sequence[str], layout: Layout, source: Path) -> N
             return
         if all(cell.lower() in MISSING for cell in cells):
             continue
-        if len(cells) == layout.width and any(layout.dialect.number(cell) is not None for cell in cells):
+        n_number = sum(layout.dialect.number(cell) is not None for cell in cells)
+        of_other_length = bool(layout.heading_lines) and n_number >= max(2, layout.width / 2)
+        if (len(cells) == layout.width and n_number) or of_other_length:
             raise _bad_line(cells, i, layout, source)
 
 
