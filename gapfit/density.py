@@ -39,6 +39,9 @@ HALL_FILLING = 12.0
 
 LEAST_HALL_POINTS = 8
 
+CONTRADICTION = 1.3
+"""Stated and Hall density that differ by more than this factor contradict each other (own choice)."""
+
 
 def estimate_density(family: TraceFamily, stated: float | None = None) -> DensityEstimate:
     """Density by all routes, and refined on plateau centres and minima.
@@ -59,6 +62,8 @@ def estimate_density(family: TraceFamily, stated: float | None = None) -> Densit
     InputError
         If there is nothing to start from.
     """
+    if stated is not None and family.kind == "field":
+        _refuse_contradiction(family, stated)
     routes = [] if stated is None else [DensityRoute("stated", stated, float("nan"), 1)]
     start, found = _start(family, stated)
     routes += found
@@ -95,6 +100,22 @@ def _start(family: TraceFamily, stated: float | None) -> tuple[DensityEstimate, 
             "the density is unknown: give density_cm2 in [sample], or name the Hall column rho_xy in [traces]"
         )
     return DensityEstimate("field", value, 0.0, ((0.02 * value) ** 2, 0.0, 0.0)), []
+
+
+def _refuse_contradiction(family: TraceFamily, stated: float) -> None:
+    """Refuse a stated density that the Hall resistance contradicts: every filling would get a wrong name."""
+    found = []
+    for sweep in family.sweeps:
+        if sweep.rho_xy_ohm is not None:
+            hall = np.abs(sweep.rho_xy_ohm)
+            some = hall > 0
+            found.append(float(np.median(np.abs(sweep.field_T[some]) / (e * hall[some]))))
+    classical = float(np.median(found or [np.nan]))
+    if abs(np.log(abs(classical / stated))) > np.log(CONTRADICTION):
+        raise InputError(
+            f"density_cm2 = {stated / 1e4:.4g} is stated, the Hall resistance says {classical / 1e4:.4g}: "
+            "correct or remove density_cm2 in [sample], or correct rho_xy, its unit or current_A in [traces]"
+        )
 
 
 def _hall_density(sweep: Sweep) -> tuple[float, float, bool]:
