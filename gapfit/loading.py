@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
+from itertools import pairwise
 from pathlib import PurePath
 from typing import Literal
 
@@ -23,7 +24,7 @@ from gapfit.columns import (
 )
 from gapfit.cutting import LEAST_ROWS, Record, cut_record, grouped
 from gapfit.errors import FileError, InputError, NotEnoughData
-from gapfit.series import HIGHEST_TEMPERATURE_K
+from gapfit.series import HIGHEST_TEMPERATURE_K, LARGEST_TEMPERATURE_STEP
 from gapfit.traces import (
     FromName,
     FromTable,
@@ -67,16 +68,43 @@ def load_sweeps(tables: Sequence[Table], settings: TraceSettings) -> TraceFamily
     sweeps: list[Sweep] = []
     for table in tables:
         record = _read(table, settings, notices)
-        sweeps += cut_record(record, settings.sweep, notices)
+        found = cut_record(record, settings.sweep, notices)
+        if not found and len(table) >= LEAST_ROWS:
+            raise FileError(
+                f"the {settings.sweep} goes to and fro, and never rises or falls over {LEAST_ROWS} rows, so "
+                "this is no sweep; put the rows in the order in which they were measured, or name the column "
+                "that is swept",
+                file=table.source,
+                column=_swept_column(settings),
+            )
+        sweeps += found
     if not sweeps:
         raise NotEnoughData(
             f"no sweep of at least {LEAST_ROWS} rows in {len(tables)} file(s); check the columns"
         )
     sweeps = grouped(sweeps)
     sweeps.sort(key=lambda sweep: (sweep.mean_temperature, sweep.group))
+    _refuse_mixed_units(sweeps)
     return TraceFamily(
         tuple(sweeps), settings.sweep, settings.geometry, settings.gate_start, tuple(dict.fromkeys(notices))
     )
+
+
+def _refuse_mixed_units(sweeps: Sequence[Sweep]) -> None:
+    """Refuse sweeps in order of temperature that jump from kelvins to what must be millikelvins."""
+    for low, high in pairwise(sweeps):
+        if high.mean_temperature > LARGEST_TEMPERATURE_STEP * low.mean_temperature:
+            raise FileError(
+                f"found a temperature of {high.mean_temperature:.4g} K, while the next lower one is "
+                f"{low.mean_temperature:.4g} K ({low.file}); millikelvins and kelvins seem to be mixed: "
+                "correct the unit of one",
+                file=high.file,
+            )
+
+
+def _swept_column(settings: TraceSettings) -> str | int | None:
+    rule = getattr(settings, settings.sweep)
+    return rule.column if isinstance(rule, ColumnRule) else None
 
 
 def _read(table: Table, settings: TraceSettings, notices: list[str]) -> Record:

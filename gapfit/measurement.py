@@ -6,9 +6,11 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any
 
+import numpy as np
+
 from gapfit.calibration import DensityEstimate
 from gapfit.density import estimate_density
-from gapfit.errors import InputError
+from gapfit.errors import InputError, NotEnoughData
 from gapfit.fillings import find_fillings
 from gapfit.fit import FitSettings
 from gapfit.gather import Minimum, ReadingSettings
@@ -17,7 +19,7 @@ from gapfit.loading import load_sweeps
 from gapfit.mechanisms import parse_combination
 from gapfit.minima import read_minima
 from gapfit.readoff import SERIES_TEXT_COLUMNS, SeriesSettings, series_from_table
-from gapfit.series import TemperatureSeries
+from gapfit.series import MINIMUM_POINTS, TemperatureSeries
 from gapfit.study import Study, trace_settings
 from gapfit.symmetry import symmetrise
 from gapfit.tabular import Table, read_table
@@ -27,6 +29,9 @@ __all__ = ["Measurement", "fit_settings", "measure", "reading_settings"]
 
 READING_ERROR = 0.003
 """Relative stability of gain and drift of a lock-in reading, which a trace cannot show (own choice)."""
+
+LEAST_TEMPERATURE_RATIO = 1.05
+"""Sweeps whose temperatures all agree to this factor are at one temperature (own choice)."""
 
 
 @dataclass(frozen=True)
@@ -164,6 +169,7 @@ def _from_sweeps(study: Study) -> Measurement:
     mode = {"auto": "auto", True: "always", False: "never"}[study.traces.symmetrise]
     family = symmetrise(load_sweeps(tables, trace_settings(study)), mode)  # type: ignore[arg-type]
     family = _one_direction(family, study.traces.direction)
+    _check_temperatures(family, study)
     density = estimate_density(family, study.sample.density_per_m2)
     look_for = None if study.fillings.look_for == "auto" else study.fillings.look_for
     found = find_fillings(family, density, study.fillings.max_denominator, look_for)
@@ -171,6 +177,17 @@ def _from_sweeps(study: Study) -> Measurement:
     notices = [notice for table in tables for notice in table.notices]
     notices += [*family.notices, *density.notices, *found.notices, *minima.notices]
     return Measurement(minima.series, family, density, minima.minima, tuple(dict.fromkeys(notices)))
+
+
+def _check_temperatures(family: TraceFamily, study: Study) -> None:
+    """Refuse too few temperatures before anything is read off."""
+    different = np.unique(family.temperatures)
+    if different.size < MINIMUM_POINTS or different[-1] < LEAST_TEMPERATURE_RATIO * different[0]:
+        found = " and ".join(f"{kelvin:.4g}" for kelvin in different[[0, -1]][: different.size])
+        raise NotEnoughData(
+            f"{study.path}: the sweeps of {len(study.files)} file(s) are at {found} K only; a gap needs at "
+            f"least {MINIMUM_POINTS} temperatures: check files and temperature in [traces]"
+        )
 
 
 def _one_direction(family: TraceFamily, direction: str) -> TraceFamily:

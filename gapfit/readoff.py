@@ -5,18 +5,21 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from fractions import Fraction
+from itertools import pairwise
 from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gapfit.columns import ColumnRule, Table, take
-from gapfit.errors import FileError, FillingError
+from gapfit.errors import FileError, FillingError, NotEnoughData
 from gapfit.gather import chosen_quantity
 from gapfit.hall import parse_filling, plateau_resistance
 from gapfit.series import (
     HIGHEST_FRACTION_START_K,
     HIGHEST_TEMPERATURE_K,
+    LARGEST_TEMPERATURE_STEP,
+    MINIMUM_POINTS,
     ExcludedPoint,
     Quantity,
     ReadingKind,
@@ -190,6 +193,16 @@ class _Rows:
                 index,
                 "temperature_K",
             )
+        order = np.argsort(temperature)
+        for low, high in pairwise(order):
+            if temperature[high] > LARGEST_TEMPERATURE_STEP * temperature[low]:
+                row = int(self.table.row[low])
+                raise self.error(
+                    f"found {temperature[high]:g} K, while the next lower one is {temperature[low]:g} K (row "
+                    f"{row}); millikelvins and kelvins seem to be mixed: correct one of them",
+                    high,
+                    "temperature_K",
+                )
         for name in (f"{_RHO}_error", f"{_SIGMA}_error", "temperature_error_K"):
             least = np.zeros(len(self.table)) if name not in self.numbers else self.numbers[name]
             bad = (least < 0) | ((least == 0) & (name != "temperature_error_K") & (name in self.numbers))
@@ -271,6 +284,7 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
     used = np.flatnonzero(mine & ~rows.excluded)
     first = int(np.flatnonzero(mine)[0])
     filling = rows.filling[first]
+    _refuse_few(rows, first, used)
     column = _RHO if _has_readings(rows, _RHO, used) else _SIGMA
     value = rows.numbers[column][used]
     stated = rows.numbers.get(f"{column}_error")
@@ -304,6 +318,20 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
         excluded=_excluded(rows, mine, column),
         **_tilt(rows, first),
     )
+
+
+def _refuse_few(rows: _Rows, first: int, used: NDArray[np.intp]) -> None:
+    """Refuse a series of too few temperatures, often a row that differs in what makes a series."""
+    different = np.unique(rows.numbers["temperature_K"][used]).size
+    if different < MINIMUM_POINTS:
+        field = rows.number("field_T", first)
+        place = f" at {field:g} T" if np.isfinite(field) else ""
+        row = int(rows.table.row[first])
+        raise NotEnoughData(
+            f"{rows.table.source}, row {row}: filling {rows.filling[first]}{place} has {different} "
+            f"temperature(s) to fit; at least {MINIMUM_POINTS} are needed (rows of one series "
+            "share filling, field_T, sample, cooldown, contacts, drive_current_A and total_field_T)"
+        )
 
 
 def _background(

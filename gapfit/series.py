@@ -30,6 +30,8 @@ BACKGROUND_LOG_ERROR = 0.25
 
 HIGHEST_TEMPERATURE_K = 350.0
 HIGHEST_FRACTION_START_K = 15.0
+LARGEST_TEMPERATURE_STEP = 100.0
+"""From one temperature to the next; beyond it millikelvins and kelvins are mixed (own choice)."""
 
 
 @dataclass(frozen=True)
@@ -294,7 +296,7 @@ def _check_readings(
 def _check_temperature_unit(temperature: FloatArray, filling: Fraction) -> None:
     """Refuse temperatures that must be millikelvins: above 350 K, or a fraction studied above 15 K only."""
     low, high = float(temperature.min(initial=np.inf)), float(temperature.max(initial=0.0))
-    if high > HIGHEST_TEMPERATURE_K or (filling.denominator > 1 and low > HIGHEST_FRACTION_START_K):
+    if high > HIGHEST_TEMPERATURE_K or (filling.denominator > 1 and high >= low > HIGHEST_FRACTION_START_K):
         raise InputError(
             f"filling {filling}: temperatures run from {low:g} to {high:g} K, which look like millikelvins; "
             'state the unit (unit = "mK") or correct the column'
