@@ -27,6 +27,7 @@ from gapfit.series import TemperatureSeries
 
 __all__ = [
     "FORMAT_VERSION",
+    "RUN_FORMAT",
     "atomic_path",
     "file_digest",
     "plain",
@@ -41,6 +42,9 @@ __all__ = [
 
 FORMAT_VERSION = 1
 """Version of the layout of every file of this module; it grows when a reader of old files would go wrong."""
+
+RUN_FORMAT = "gapfit run"
+"""What marks the record of a run."""
 
 PACKAGES = ("numpy", "scipy", "pandas", "emcee", "matplotlib", "h5netcdf")
 
@@ -321,7 +325,7 @@ def run_record(
     """
     names = series_names([fit.series for fit in fits])
     return {
-        "format": "gapfit run",
+        "format": RUN_FORMAT,
         "format_version": FORMAT_VERSION,
         "versions": _versions(),
         "seed": seed,

@@ -11,18 +11,18 @@ import multiprocessing
 import os
 import time
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import Future, ProcessPoolExecutor
-from contextlib import contextmanager
+from concurrent.futures import ProcessPoolExecutor
+from contextlib import contextmanager, nullcontext
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from functools import cached_property
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
 from gapfit.archive import fit_fingerprint, load_fit, save_fit, write_posterior
-from gapfit.errors import FileError, GapfitError, InputError
+from gapfit.errors import FileError, InputError
 from gapfit.fit import FitSettings, GapFit, fit_temperature_series
 from gapfit.folders import ResultFolder
 from gapfit.hall import filling_label, parse_filling
@@ -199,10 +199,8 @@ def fit_study(
     folder = None if out is None else ResultFolder(out)
     measurement = measure(study)
     settings = fit_settings(study, engine, seed)
-    if folder is not None:
-        folder.open()
     names = series_names(measurement.series)
-    with _pool(jobs, len(names)) as submit:
+    with nullcontext() if folder is None else folder.open(), _pool(jobs, len(names)) as submit:
         tasks = _submit_all(submit, study, measurement, settings, names, folder, figures)
         done = [_told(task, index, len(tasks), progress) for index, task in enumerate(tasks)]
         result = StudyResult(
@@ -245,15 +243,21 @@ class _Done:
     drawn: dict[str, str]
 
 
+class _Pending(Protocol):
+    """A task whose result can be waited for."""
+
+    def result(self) -> _Done: ...
+
+
 def _submit_all(
-    submit: Callable[..., Future[_Done]],
+    submit: Callable[..., _Pending],
     study: Study,
     measurement: Measurement,
     settings: FitSettings,
     names: Sequence[str],
     folder: ResultFolder | None,
     figures: bool,
-) -> list[Future[_Done]]:
+) -> list[_Pending]:
     tasks = []
     for series, name in zip(measurement.series, names, strict=True):
         stored = None if folder is None else folder.fits / f"{fit_fingerprint(series, settings)}.npz"
@@ -327,7 +331,7 @@ def _fit_across(fit: GapFit, task: _Task) -> tuple[tuple[float, GapFit], ...]:
     return tuple(sorted([*sides, (0.0, fit)], key=lambda pair: pair[0]))
 
 
-def _told(task: Future[_Done], index: int, total: int, progress: Progress | None) -> _Done:
+def _told(task: _Pending, index: int, total: int, progress: Progress | None) -> _Done:
     done = task.result()
     if progress is not None:
         progress(index + 1, total, f"filling {done.title}: {done.fit.verdict}")
@@ -335,12 +339,12 @@ def _told(task: Future[_Done], index: int, total: int, progress: Progress | None
 
 
 @contextmanager
-def _pool(jobs: int, n_task: int) -> Iterator[Callable[..., Future[_Done]]]:
-    """A way to submit tasks: to processes, or done at once in this one."""
+def _pool(jobs: int, n_task: int) -> Iterator[Callable[..., _Pending]]:
+    """A way to submit tasks: to processes, or to be done one by one in this one."""
     if jobs < 1:
         raise InputError(f"jobs = {jobs}; at least one process is needed")
     if min(jobs, n_task) == 1:
-        yield _at_once
+        yield _Later
         return
     for name in THREADS:
         os.environ.setdefault(name, "1")
@@ -353,13 +357,15 @@ def _pool(jobs: int, n_task: int) -> Iterator[Callable[..., Future[_Done]]]:
             raise
 
 
-def _at_once(work: Callable[[_Task], _Done], task: _Task) -> Future[_Done]:
-    future: Future[_Done] = Future()
-    try:
-        future.set_result(work(task))
-    except GapfitError as error:
-        future.set_exception(error)
-    return future
+@dataclass(frozen=True)
+class _Later:
+    """A task that is done in this process when its result is asked for."""
+
+    work: Callable[[_Task], _Done]
+    task: _Task
+
+    def result(self) -> _Done:
+        return self.work(self.task)
 
 
 # ----------------------------------------------------------------------------------------------- record
