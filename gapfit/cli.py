@@ -200,22 +200,26 @@ def table(
     from gapfit.tables import read_gaps
     from gapfit.typeset import render_table
 
-    style = TableStyle(
-        format=form,
-        unit=unit,
-        level=level,
-        convention="half" if half else "gap",
-        columns=tuple(part.strip() for part in columns.split(",") if part.strip()),
-        standalone=True,
-    )
-    text = render_table(read_gaps(run), style)
+    frame = read_gaps(run)
+    try:
+        style = TableStyle(
+            format=form,
+            unit=unit,
+            level=level,
+            convention="half" if half else "gap",
+            columns=tuple(part.strip() for part in columns.split(",") if part.strip()),
+            standalone=True,
+        )
+        text = render_table(frame, style)
+    except InputError as error:
+        raise typer.BadParameter(str(error)) from error
     if out is None:
         typer.echo(text, nl=not text.endswith("\n"))
     else:
         typer.echo(str(write_text(out, text)))
 
 
-# ------------------------------------------------------------------------------------------------------ helpers
+# ---------------------------------------------------------------------------------------------------- helpers
 
 
 def _check_engine(engine: str | None) -> None:
