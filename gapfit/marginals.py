@@ -315,7 +315,7 @@ def _window_axes(axes: Axes, lower: FloatArray, upper: FloatArray, size: tuple[f
     """Ticks at ends of windows, as many as there is room for."""
     for which, ends, room, least in (("x", lower, size[0], 7.5), ("y", upper, size[1], 3.6)):
         every = max(1, int(np.ceil(ends.size * least / room)))
-        places = range(0, ends.size, every)
+        places = range(0, ends.size, every) if which == "x" else range(ends.size - 1, -1, -every)
         set_ticks(axes, which, list(places), [plain_number(float(f"{ends[k]:.3g}")) for k in places])
     label_axes(axes, "lower end of the window (K)", "upper end of the window (K)", y_mm=10.5)
 

@@ -251,10 +251,10 @@ def draw_readings(axes: Axes, groups: list[Readings], against: Against) -> None:
 
 
 def _draw_missing(axes: Axes, group: Readings, x: FloatArray) -> None:
-    """Points without a reading: their marker on the lower edge, at their temperature."""
+    """Points without a reading: their marker at the lower edge, at their temperature."""
     look = group.look
     style = {name: look[name] for name in ("marker", "color", "markerfacecolor", "markersize", "linestyle")}
-    axes.plot(x, 0 * x, transform=axes.get_xaxis_transform(), clip_on=False, zorder=6, **style)
+    axes.plot(x, 0 * x + 0.035, transform=axes.get_xaxis_transform(), zorder=6, **style)
 
 
 def draw_band(axes: Axes, curves: PosteriorCurves, against: Against) -> None:

@@ -205,7 +205,7 @@ def hopping_figure(fit: GapFit, width_mm: float = TWO_COLUMNS_MM) -> Figure:
         draw_band(axes, curves, against)
         draw_parts(axes, curves, fit, against)
         draw_readings(axes, groups, against)
-        x = against.x(curves.temperature)
+        x = against.x(np.concatenate([curves.temperature, *(group.temperature for group in groups)]))
         margin = 0.03 * float(np.ptp(x))
         axes.set_xlim(x.min() - margin, x.max() + margin)
         scale.apply(axes)

@@ -112,8 +112,8 @@ def overview_figure(fits: Sequence[GapFit], width_mm: float = TWO_COLUMNS_MM) ->
         place(axes, left, bottom, room, tall)
         temperature_ticks_above(axes, 1.0, room)
         axes.xaxis.set_major_locator(MaxNLocator(4, steps=[1, 2, 2.5, 5, 10]))
-        at = ((left - 2.0) / width, (bottom + tall + 4.2) / height)
-        figure.text(*at, _small_title(fit), ha="left", va="bottom", fontsize=6.5, linespacing=1.15)
+        at = ((left - 6.0) / width, (bottom + tall + 4.2) / height)
+        figure.text(*at, _small_title(fit), ha="left", va="bottom", fontsize=6.0, linespacing=1.15)
         if index % columns == 0 or len(set(names)) > 1:
             label_axes(axes, None, names[index], y_mm=9.0)
     words = "inverse temperature 1/T (K⁻¹); above: temperature (K)"
