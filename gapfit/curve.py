@@ -23,6 +23,9 @@ __all__ = ["Curve", "Reference", "evaluate", "log_prefactor"]
 
 FloatArray = NDArray[np.float64]
 
+NEGLIGIBLE_RISE = -15.0
+"""Below this logarithm of (activated / background)^k the closure changes nothing."""
+
 _G, _A, _B, _K, _Q, _BS, _H, _HT, _HX, _N, _NR, _L, _O, _E, _F, _P, _S, _I = range(len(PARAMETERS))
 
 
@@ -194,21 +197,21 @@ def _closed(
     background, k = x[:, _B] + x[:, _BS] * (bath - 1), _exp(x[:, _K])
     q = 1 / (1 + _exp(-x[:, _Q]))
     rise = np.minimum(k * (log_active - background), LARGEST_EXPONENT / 2)
-    ratio = np.exp(rise)
-    depth = -np.log1p(q * ratio) / q
-    small = rise < -30.0
-    filled = np.where(small, rise, np.log(np.where(small, 1.0, -np.expm1(depth))))
+    ratio = np.exp(np.maximum(rise, NEGLIGIBLE_RISE))
+    open_share = 1 + q * ratio
+    depth = np.log1p(q * ratio) / q
+    level = -np.expm1(-depth)
+    negligible = rise < NEGLIGIBLE_RISE
+    filled = np.where(negligible, rise, np.log(level))
     value = np.exp(background + filled / k)
-    with np.errstate(over="ignore"):
-        steep = np.where(small, 0.0, 1 / np.expm1(np.where(small, 1.0, -depth)))
-    local = ratio / (1 + q * ratio)
-    share = np.where(small, 1.0, steep * local)
+    steep, local = (1 - level) / level, ratio / open_share
+    share = np.where(negligible, 1.0, steep * local)
     if columns is not None:
         columns[_B] = value * (1 - share)
         columns[_BS] = columns[_B] * (bath - 1)
         columns[_K] = value * (share * rise - filled) / k
-        by_shape = np.log1p(q * ratio) / q**2 - local / q
-        columns[_Q] = -value * steep * by_shape / k * q * (1 - q)
+        by_shape = depth / q - local / q
+        columns[_Q] = np.where(negligible, 0.0, -value * steep * by_shape / k * q * (1 - q))
     return value, share
 
 

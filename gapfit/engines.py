@@ -17,10 +17,18 @@ __all__ = ["fast_diagnostics", "fast_draws", "sampled_draws"]
 
 FloatArray = NDArray[np.float64]
 
-CARRIES_WEIGHT = 0.03
+CARRIES_WEIGHT = 0.08
+"""Share of the average from which a combination is sampled; the others keep the draws of the fast engine."""
+
 SMALLEST_FAST_ESS = 400.0
 LARGEST_DISAGREEMENT = 4.0
+NOTICEABLE_SHIFT = 0.1
+"""The engines disagree where a quantile of ln gap differs by more than four Monte-Carlo standard errors, and
+by more than this part of the 68 % half-width."""
+
 KEPT_DRAWS = 4000
+UNSAFE_SHARE = 0.1
+"""Heavy-tailed importance weights are an alarm where combinations that are not sampled have this share of them."""
 
 
 def fast_draws(problem: Problem, explored: Explored, log_prior: float) -> CombinationDraws:
@@ -108,7 +116,8 @@ def sampled_draws(
     posteriors, reasons, rhat = list(fast), [], 1.0
     ess = np.array([item.ess for item in explored])
     seeds = seed.spawn(len(explored))
-    for index in map(int, np.flatnonzero(share > CARRIES_WEIGHT)):
+    sampled = share > min(CARRIES_WEIGHT, float(share.max()) / 2)
+    for index in map(int, np.flatnonzero(sampled)):
         item = explored[index]
         posterior = LogPosterior(problem, item.combination)
         rules = replace(SamplingRules(), smallest_ess=SMALLEST_ESS * max(0.1, float(share[index])))
@@ -123,14 +132,21 @@ def sampled_draws(
         )
         rhat, ess[index] = max(rhat, chains.rhat), chains.ess
         reasons += [f"{item.combination.name}: {reason}" for reason in chains.reasons]
-    disagreement = _disagreement(fast, posteriors, explored, ess)
+    disagreement, shift = _disagreement(fast, posteriors, explored, ess)
+    agree = disagreement < LARGEST_DISAGREEMENT or shift < NOTICEABLE_SHIFT
+    unsafe = [
+        (part, item.pareto_k)
+        for item, taken, part in zip(explored, sampled, share, strict=True)
+        if not taken and item.pareto_k > LARGEST_PARETO_K
+    ]
+    together = sum(part for part, _ in unsafe)
     return posteriors, Diagnostics(
         not reasons,
         tuple(reasons),
         rhat,
         _average_ess(_shares(posteriors), ess),
-        fast_diagnostics(fast, explored).pareto_k,
-        disagreement < LARGEST_DISAGREEMENT,
+        max(shape for _, shape in unsafe) if together > UNSAFE_SHARE else float("-inf"),
+        agree,
         disagreement,
     )
 
@@ -140,16 +156,20 @@ def _disagreement(
     sampled: Sequence[CombinationDraws],
     explored: Sequence[Explored],
     sampled_ess: FloatArray,
-) -> float:
-    """Largest difference of two distributions of ln gap at five quantiles, in Monte-Carlo standard errors."""
+) -> tuple[float, float]:
+    """Largest difference of two distributions of ln gap at five quantiles.
+
+    In Monte-Carlo standard errors, and as part of the 68 % half-width.
+    """
     gapped = [index for index, item in enumerate(explored) if item.combination.activated]
     if not gapped:
-        return 0.0
+        return 0.0, 0.0
     share = _shares([fast[index] for index in gapped])
     evidence_error = np.array([explored[index].log_evidence_error for index in gapped])
     first = [fast[index] for index in gapped]
     second = [sampled[index] for index in gapped]
-    worst = 0.0
+    worst, shift = 0.0, 0.0
+    width = (_mixture_quantile(second, 0.84) - _mixture_quantile(second, 0.16)) / 2
     for probability in (0.025, 0.16, 0.5, 0.84, 0.975):
         where = _mixture_quantile(second, probability)
         beneath = [posterior.coordinates[:, 0] < where for posterior in first]
@@ -162,7 +182,8 @@ def _disagreement(
         ]
         chance = share**2 * (np.array(own) + probability * (1 - probability) / sampled_ess[gapped])
         worst = max(worst, abs(total - probability) / np.sqrt(np.sum(spread**2 + chance)))
-    return float(worst)
+        shift = max(shift, abs(_mixture_quantile(first, probability) - where) / max(width, 1e-12))
+    return float(worst), float(shift)
 
 
 def _mixture_quantile(posteriors: Sequence[CombinationDraws], probability: float) -> float:

@@ -53,7 +53,7 @@ class SamplingRules:
     n_walker: int = 128
     n_from_modes: int = 1
     warm_up: int = 50
-    max_steps: int = 3200
+    max_steps: int = 1600
     smallest_ess: float = SMALLEST_ESS
 
 
@@ -177,15 +177,15 @@ def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess:
 
 
 def _moves(proposal: Mixture) -> list[tuple[emcee.moves.Move, float]]:
-    """Half independence proposals, half local ensemble moves."""
+    """Independence proposals, mixed with local ensemble moves."""
 
     def jump(position: FloatArray, random: np.random.RandomState) -> tuple[FloatArray, FloatArray]:
         rng = np.random.default_rng(random.randint(2**31 - 1, size=4))
         offered = rng.permutation(proposal.sample(len(position), rng))
         return offered, proposal.log_density(position) - proposal.log_density(offered)
 
-    local = [(emcee.moves.StretchMove(), 0.15), (emcee.moves.DEMove(), 0.35)]
-    return [(emcee.moves.MHMove(jump), 0.5), *local]
+    local = [(emcee.moves.StretchMove(), 0.1), (emcee.moves.DEMove(), 0.3)]
+    return [(emcee.moves.MHMove(jump), 0.6), *local]
 
 
 def _tempered_from_prior(posterior: LogPosterior, rng: np.random.Generator) -> FloatArray:
