@@ -28,7 +28,7 @@ by more than this part of the 68 % half-width."""
 
 KEPT_DRAWS = 4000
 UNSAFE_SHARE = 0.1
-"""Heavy-tailed importance weights are an alarm where combinations that are not sampled have this share of them."""
+"""Heavy-tailed weights are an alarm where combinations that are not sampled have this share together."""
 
 
 def fast_draws(problem: Problem, explored: Explored, log_prior: float) -> CombinationDraws:
