@@ -112,8 +112,8 @@ def _from_table(study: Study) -> Measurement:
 
 
 def _text_columns(study: Study) -> tuple[str, ...]:
-    own = () if study.series is None else _column_names(study).values()
-    return (*SERIES_TEXT_COLUMNS, *(str(name) for name in own))
+    own = [str(column) for name, column in _column_names(study).items() if name in SERIES_TEXT_COLUMNS]
+    return (*SERIES_TEXT_COLUMNS, *own)
 
 
 def _column_names(study: Study) -> dict[str, Any]:
