@@ -53,7 +53,7 @@ def parse_filling(text: str | int | Fraction) -> Fraction:
     Raises
     ------
     FillingError
-        If the text is no integer or fraction, or its denominator is zero, or it is zero over something.
+        If the text is no integer or fraction, or its denominator is zero.
     """
     if isinstance(text, (int, Fraction)):
         return Fraction(text)

@@ -281,12 +281,12 @@ PARAMETERS: tuple[Parameter, ...] = (
     ),
     Parameter("background", r"$y_{bg}$", "reading", "level that the minimum fills up to", "log", FAR),
     Parameter("sharpness", r"$k$", "", "sharpness of the roll-over", "log", 0.0),
-    Parameter("saturation", r"$q$", "", "shape of the roll-over, 1 power mean to 0 exponential", "unit",
-    FAR), Parameter(
+    Parameter("saturation", r"$q$", "", "shape of the roll-over, 1 power mean to 0 exponential", "unit", FAR),
+    Parameter(
         "background_slope", r"$s_{bg}$", "", "relative rise of the background by T over T_h", "linear", 0.0
     ),
-    Parameter("hopping", r"$y_h(T_l)$", "reading", "hopping contribution at the low reference", "log",
-    -FAR), Parameter("hopping_T0_K", r"$T_{hop}$", "K", "hopping temperature", "log", 0.0),
+    Parameter("hopping", r"$y_h(T_l)$", "reading", "hopping contribution at the low reference", "log", -FAR),
+    Parameter("hopping_T0_K", r"$T_{hop}$", "K", "hopping temperature", "log", 0.0),
     Parameter("hopping_exponent", r"$\alpha$", "", "1/2 Efros-Shklovskii, 1/3 Mott (fixed)", "linear", 0.5),
     Parameter(
         "nearest", r"$y_3(T_l)$", "reading", "nearest-neighbour hopping at the low reference", "log", -FAR

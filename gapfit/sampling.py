@@ -19,12 +19,12 @@ from gapfit.diagnostics import (
     LARGEST_RHAT,
     SMALLEST_ESS,
     bulk_ess,
-    effective_weights,
     nested_rhat,
     tail_ess,
 )
 from gapfit.explore import Explored, Mixture, fit_mixture
-from gapfit.posterior import LogPosterior, log_mean_exp, log_standard_normal, systematic_resample
+from gapfit.posterior import LogPosterior, log_mean_exp
+from gapfit.tempering import tempered_particles
 
 __all__ = ["Chains", "SamplingRules", "bridge_evidence", "sample"]
 
@@ -110,7 +110,7 @@ def sample(
     seeds = seed.spawn(2 + rules.n_from_modes)
     states: list[Any] = [np.random.RandomState(np.random.MT19937(child)).get_state() for child in seeds]
     rngs = [np.random.default_rng(child.spawn(1)[0]) for child in seeds]
-    particles = _tempered_from_prior(posterior, rngs[BLIND])
+    particles = tempered_particles(posterior, N_PARTICLE, MOVES_A_STAGE, rngs[BLIND])
     positions = [
         rngs[0].standard_normal((rules.n_walker, posterior.n_fitted)),
         particles[rngs[BLIND].choice(N_PARTICLE, rules.n_walker, replace=False)],
@@ -158,6 +158,8 @@ def _fitted(draws: FloatArray, rng: np.random.Generator) -> Mixture:
 
 
 BLIND = 1
+N_PARTICLE = 1000
+MOVES_A_STAGE = 4.0
 ADAPTING_DRAWS = 3000
 N_COMPONENT = 6
 
@@ -186,71 +188,6 @@ def _moves(proposal: Mixture) -> list[tuple[emcee.moves.Move, float]]:
 
     local = [(emcee.moves.StretchMove(), 0.1), (emcee.moves.DEMove(), 0.3)]
     return [(emcee.moves.MHMove(jump), 0.6), *local]
-
-
-def _tempered_from_prior(posterior: LogPosterior, rng: np.random.Generator) -> FloatArray:
-    """Particles from the prior by tempering the likelihood from power zero to one.
-
-    Resampling and local moves: Del Moral, Doucet & Jasra, J. R. Stat. Soc. B 68, 411 (2006); the powers
-    keep half of the particles effective. It knows nothing of the fast engine.
-    """
-    points = rng.standard_normal((N_PARTICLE, posterior.n_fitted))
-    log_posterior = posterior(points)
-    power = 0.0
-    while power < 1:
-        log_likelihood = log_posterior - log_standard_normal(points)
-        following = _next_power(log_likelihood, power)
-        weight = np.exp((following - power) * (log_likelihood - log_likelihood.max()))
-        chosen = systematic_resample(weight, N_PARTICLE, rng)
-        points, log_posterior, power = points[chosen], log_posterior[chosen], following
-        moved = 0.0
-        for stretch in STRETCHES:
-            offered = _local_step(posterior, points, log_posterior, power, stretch, rng)
-            moved += float(np.mean(offered[1] != log_posterior))
-            points, log_posterior = offered
-            if moved > MOVES_A_STAGE:
-                break
-    return points
-
-
-N_PARTICLE = 1000
-STRETCHES = (1.0, 0.5, 0.25, 0.1) * 8
-MOVES_A_STAGE = 4.0
-
-
-def _next_power(log_likelihood: FloatArray, power: float) -> float:
-    """Largest power at which the reweighted particles are still half effective."""
-    low, high = power, 1.0
-    if effective_weights((high - power) * log_likelihood) >= 0.5 * log_likelihood.size:
-        return 1.0
-    for _ in range(30):
-        middle = (low + high) / 2
-        if effective_weights((middle - power) * log_likelihood) >= 0.5 * log_likelihood.size:
-            low = middle
-        else:
-            high = middle
-    return max(low, power + 1e-6)
-
-
-def _local_step(
-    posterior: LogPosterior,
-    points: FloatArray,
-    log_posterior: FloatArray,
-    power: float,
-    stretch: float,
-    rng: np.random.Generator,
-) -> tuple[FloatArray, FloatArray]:
-    """One differential-evolution Metropolis step of all particles at a power of the likelihood."""
-    n_draw, n_dim = points.shape
-    first, second = rng.integers(n_draw, size=(2, n_draw))
-    size = stretch * 2.38 / np.sqrt(2 * n_dim)
-    offered = points + size * (points[first] - points[second]) + 1e-4 * rng.standard_normal(points.shape)
-    log_offered = posterior(offered)
-    change = power * (log_offered - log_posterior) + (1 - power) * (
-        log_standard_normal(offered) - log_standard_normal(points)
-    )
-    taken = np.log(rng.uniform(size=n_draw)) < change
-    return np.where(taken[:, None], offered, points), np.where(taken, log_offered, log_posterior)
 
 
 def _around_modes(explored: Explored, n_walker: int, rng: np.random.Generator) -> FloatArray:

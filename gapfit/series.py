@@ -295,7 +295,9 @@ def _check_readings(
 
 def _check_temperature_unit(temperature: FloatArray, filling: Fraction) -> None:
     """Refuse temperatures that must be millikelvins: above 350 K, or a fraction studied above 15 K only."""
-    low, high = float(temperature.min(initial=np.inf)), float(temperature.max(initial=0.0))
+    if temperature.size == 0:
+        return
+    low, high = float(temperature.min()), float(temperature.max())
     if high > HIGHEST_TEMPERATURE_K or (filling.denominator > 1 and high >= low > HIGHEST_FRACTION_START_K):
         raise InputError(
             f"filling {filling}: temperatures run from {low:g} to {high:g} K, which look like millikelvins; "
