@@ -20,6 +20,8 @@ from gapfit.series import (
     HIGHEST_TEMPERATURE_K,
     LARGEST_TEMPERATURE_STEP,
     MINIMUM_POINTS,
+    NO_TEMPERATURE_ERROR,
+    ErrorSource,
     ExcludedPoint,
     Quantity,
     ReadingKind,
@@ -34,7 +36,8 @@ __all__ = ["SERIES_TEXT_COLUMNS", "SeriesSettings", "series_from_table", "series
 FloatArray = NDArray[np.float64]
 
 SERIES_TEXT_COLUMNS = (
-    "filling", "sample", "cooldown", "contacts", "direction", "reading", "flags", "excluded", "reason",
+    "filling", "sample", "cooldown", "contacts", "direction", "reading", "error_source", "flags",
+    "excluded", "reason",
 )  # fmt: skip
 """Columns of a table of minima that are text although they may look like numbers."""
 
@@ -67,7 +70,8 @@ class SeriesSettings:
     quantity : {"auto", "rho_xx", "sigma_xx"}
         ``"auto"`` takes what the table has; readings of rho_xx above 0.2 rho_xy are converted to sigma_xx.
     temperature_relative_error : float, optional
-        Relative error of each temperature, in quadrature with that of the table.
+        Relative error of each temperature, in quadrature with that of the table. A table with a column
+        error_source is the record of a run, whose errors hold it already.
     relative_reading_error : float
         Relative error of each reading, in quadrature with that of the table.
     geometry_known : bool
@@ -93,7 +97,7 @@ def series_from_table(table: Table, settings: SeriesSettings | None = None) -> t
         Columns filling, temperature_K and rho_xx_ohm or sigma_xx_S; optional: field_T, *_error,
         temperature_error_K, *_background (flank level) and *_background_rise (its change over the reference
         temperature), rho_xy_ohm, sample, cooldown, contacts, direction, drive_current_A,
-        total_field_T, excluded (yes or no), reason.
+        total_field_T, reading, error_source (stated, trace or assumed), flags, excluded (yes or no), reason.
     settings : SeriesSettings, optional
         Quantity, errors and names.
 
@@ -156,7 +160,7 @@ class _Rows:
         tilt = self.number("total_field_T", index)
         return (self.filling[index], *_rounded(self.number("field_T", index), current, tilt), *names)
 
-    def text(self, name: str, index: int) -> str:
+    def text(self, name: str, index: int | np.intp) -> str:
         return str(self.texts[name][index]) if name in self.texts else ""
 
     def number(self, name: str, index: int | np.intp) -> float:
@@ -305,7 +309,7 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
         field_T=rows.number("field_T", first),
         quantity=quantity,
         hall_resistance_ohm=float(np.median(hall)) if hall.size else abs(plateau_resistance(filling)),
-        error_source="assumed" if assumed else "stated",
+        error_source=_error_source(rows, first, assumed),
         **_background(rows, first, column, quantity, hall),
         geometry_known=settings.geometry_known,
         sample=rows.text("sample", first) or settings.sample,
@@ -314,7 +318,7 @@ def _one_series(rows: _Rows, mine: NDArray[np.bool_], settings: SeriesSettings) 
         direction=directions.pop() if len(directions) == 1 else "",
         drive_current_A=rows.number("drive_current_A", first),
         reading=_reading(rows, first),
-        flags=(("errors_assumed",) if assumed else ()) + _table_flags(rows, first),
+        flags=(("errors_assumed",) if assumed else ()) + _table_flags(rows, first, settings),
         excluded=_excluded(rows, mine, column),
         **_tilt(rows, first),
     )
@@ -360,8 +364,23 @@ def _reading(rows: _Rows, first: int) -> ReadingKind:
     return "minimum" if text == "minimum" else "mean" if text == "mean" else "exact"
 
 
-def _table_flags(rows: _Rows, first: int) -> tuple[str, ...]:
-    return tuple(flag for flag in rows.text("flags", first).split(";") if flag)
+def _error_source(rows: _Rows, first: int, assumed: bool) -> ErrorSource:
+    """Where the table says that its errors come from."""
+    if assumed:
+        return "assumed"
+    text = rows.text("error_source", first)
+    known: tuple[ErrorSource, ...] = ("stated", "trace", "assumed")
+    for source in known:
+        if text in (source, ""):
+            return source
+    raise rows.error(f"found {text!r}; allowed are {', '.join(known)}", first, "error_source")
+
+
+def _table_flags(rows: _Rows, first: int, settings: SeriesSettings) -> tuple[str, ...]:
+    """Flags of the table; that of missing temperature errors goes where the study gives them."""
+    flags = (flag for flag in rows.text("flags", first).split(";") if flag)
+    given = settings.temperature_relative_error is not None
+    return tuple(flag for flag in flags if not (given and flag == NO_TEMPERATURE_ERROR))
 
 
 def _hall(rows: _Rows, used: NDArray[np.intp], filling: Fraction) -> FloatArray:
@@ -385,6 +404,9 @@ def _temperature_error(rows: _Rows, used: NDArray[np.intp], settings: SeriesSett
     if column is None and relative is None:
         return None
     own = np.zeros(used.size) if column is None else column[used]
+    recorded = "error_source" in rows.texts and NO_TEMPERATURE_ERROR not in rows.text("flags", used[0])
+    if recorded and column is not None:
+        return own
     return np.hypot(own, (relative or 0.0) * rows.numbers["temperature_K"][used])
 
 
@@ -425,7 +447,7 @@ _COLUMNS = (
     f"{_RHO}_background", f"{_RHO}_background_rise",
     f"{_SIGMA}_background", f"{_SIGMA}_background_rise", "rho_xy_ohm",
     "sample", "cooldown", "contacts", "direction", "drive_current_A", "total_field_T",
-    "reading", "flags", "excluded", "reason",
+    "reading", "error_source", "flags", "excluded", "reason",
 )  # fmt: skip
 
 
@@ -445,6 +467,7 @@ def _series_rows(one: TemperatureSeries) -> list[dict[str, Any]]:
         "drive_current_A": _blank(one.drive_current_A),
         "total_field_T": _blank(one.total_field_T),
         "reading": one.reading,
+        "error_source": one.error_source,
         "flags": ";".join(one.flags),
     }
     used: list[dict[str, Any]] = [

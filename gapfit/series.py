@@ -13,6 +13,8 @@ from gapfit.errors import InputError, NotEnoughData
 from gapfit.hall import plateau_resistance
 
 __all__ = [
+    "NO_TEMPERATURE_ERROR",
+    "ErrorSource",
     "ExcludedPoint",
     "Quantity",
     "ReadingKind",
@@ -24,6 +26,8 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 Quantity = Literal["rho_xx", "sigma_xx"]
 ReadingKind = Literal["exact", "minimum", "mean"]
+ErrorSource = Literal["stated", "trace", "assumed"]
+NO_TEMPERATURE_ERROR = "no_temperature_error"
 MINIMUM_POINTS = 3
 BACKGROUND_LOG_ERROR = 0.25
 """The lower shoulder is known to per cent, but what closes the activation is only near it (own choice)."""
@@ -109,7 +113,7 @@ class TemperatureSeries:
     quantity: Quantity = "rho_xx"
     hall_resistance_ohm: float = float("nan")
     reading: ReadingKind = "exact"
-    error_source: Literal["stated", "trace", "assumed"] = "stated"
+    error_source: ErrorSource = "stated"
     background: float = float("nan")
     background_slope: float = float("nan")
     background_log_error: float = BACKGROUND_LOG_ERROR
@@ -219,7 +223,7 @@ def make_series(
         flags += ("errors_assumed",)
     if temperature_error is None:
         temperature_error = 0.0
-        flags += ("no_temperature_error",)
+        flags += (NO_TEMPERATURE_ERROR,)
     error = _spread(error, value.size, "error")
     temperature_error = _spread(temperature_error, value.size, "temperature_error")
     _check_readings(temperature, value, error, temperature_error, filling)
