@@ -8,7 +8,7 @@ from scipy import integrate, stats
 
 from gapfit.averaging import combination_log_prior
 from gapfit.explore import Mixture, explore, fit_mixture
-from gapfit.mechanisms import COMBINATIONS, SLOT, activation, parse_combination
+from gapfit.mechanisms import SLOT, activation, parse_combination
 from gapfit.posterior import LogPosterior, every_window, make_problem, one_window
 
 SEED = 20260101
@@ -62,11 +62,11 @@ def series(simulate_readings):
 
 
 def grid_evidence(posterior, found, n_grid):
-    """Trapezium rule over ten standard deviations of the posterior about its mean, either way."""
+    """Trapezium rule over eight standard deviations of the posterior about its mean, either way."""
     weight = np.exp(found.log_weight)
     mean = weight @ found.whitened
     root = np.linalg.cholesky(np.cov(found.whitened.T, aweights=weight))
-    axis = np.linspace(-10, 10, n_grid)
+    axis = np.linspace(-8, 8, n_grid)
     mesh = np.stack(np.meshgrid(*[axis] * mean.size, indexing="ij"), axis=-1).reshape(-1, mean.size)
     values = np.concatenate([posterior(mean + part @ root.T) for part in np.array_split(mesh, 40)])
     cell = (axis[1] - axis[0]) ** mean.size * np.prod(np.diag(root))
@@ -82,21 +82,21 @@ def test_evidence_against_quadrature(series, text, windowed):
     combination = parse_combination(text)
     posterior = LogPosterior(make_problem(series, windows), combination)
     found = explored_alone(posterior)
-    expected = grid_evidence(posterior, found, 81 if text == "activation" else 201)
+    expected = grid_evidence(posterior, found, 61 if text == "activation" else 201)
     error = np.hypot(4 * found.log_evidence_error, 0.01)
     assert found.log_evidence == pytest.approx(expected, abs=error)
 
 
 def test_evidence_error_is_honest(series):
-    """Scatter of the log evidence over seeds against its stated error (chi-squared, 12 runs)."""
+    """Scatter of the log evidence over seeds against its stated error (chi-squared, 8 runs)."""
     posterior = LogPosterior(
         make_problem(series, every_window(14, 3.0)), parse_combination("activation + leak")
     )
-    runs = [explored_alone(posterior, seed) for seed in range(12)]
+    runs = [explored_alone(posterior, seed) for seed in range(8)]
     evidence = np.array([run.log_evidence for run in runs])
     error = np.sqrt(np.mean([run.log_evidence_error**2 for run in runs]))
     chi_squared = np.sum((evidence - evidence.mean()) ** 2) / error**2
-    assert chi_squared < stats.chi2(11).isf(1e-4)
+    assert chi_squared < stats.chi2(7).isf(1e-4)
 
 
 # ----------------------------------------------------------------------------- draws and weights
@@ -115,13 +115,17 @@ def test_weights_sum_to_one_and_draws_are_reproducible(series):
 
 
 def test_the_combinations_that_matter_are_kept_in_both_families(series):
-    problem = make_problem(series, every_window(14, 3.0))
-    log_prior = combination_log_prior(COMBINATIONS, 1.0)
-    found = explore(problem, COMBINATIONS, log_prior, np.random.default_rng(0))
-    names = {item.combination.name for item in found}
+    """Flat and hopping curves are hopeless here; the best of them is kept as the other side of the scale."""
+    problem = make_problem(series, one_window(series))
+    texts = ("activation", "activation + leak", "activation + heating", "es", "mott", "constant", "power law")
+    combinations = tuple(map(parse_combination, texts))
+    log_prior = combination_log_prior(combinations, 1.0)
+    found = explore(problem, combinations, log_prior, np.random.default_rng(0))
+    names = [item.combination.name for item in found]
+    assert names == [text for text in texts if text in names]
     assert "activation" in names
     assert any(not item.combination.activated for item in found)
-    assert len(names) < len(COMBINATIONS)
+    assert "constant" not in names
 
 
 def test_modes_are_stationary_points_of_the_posterior(series):
