@@ -14,7 +14,7 @@ ROOT = Path(__file__).resolve().parents[2]
 for variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(variable, "1")  # as the command line does; read when numpy is first imported
 
-PACKAGES = ("gapfit", "numpy", "scipy", "emcee", "matplotlib", "pandas")
+PACKAGES = ("numpy", "scipy", "emcee", "matplotlib", "pandas")
 
 
 def processor() -> str:
@@ -35,11 +35,13 @@ def commit() -> str:
 
 def conditions() -> str:
     """One paragraph: date, commit, machine, load, versions."""
+    from gapfit import __version__
+
     load = f", load {os.getloadavg()[0]:.1f} at the start" if hasattr(os, "getloadavg") else ""
     packages = ", ".join(f"{package} {version(package)}" for package in PACKAGES)
     return (
         f"{datetime.now(UTC):%Y-%m-%d}, commit {commit()}. {processor()}, {os.cpu_count()} processors{load}. "
-        f"{platform.system()}, Python {platform.python_version()}, {packages}."
+        f"{platform.system()}, Python {platform.python_version()}, gapfit {__version__}, {packages}."
     )
 
 
