@@ -125,14 +125,18 @@ def by_laws(coordinates, combination, temperature, reference=REFERENCE):
 @every_combination
 @pytest.mark.parametrize("reference", [REFERENCE, Reference(2.0, 0.07, 0.0, 2.5)])
 def test_curve_is_the_sum_of_its_laws(combination, reference):
+    """To ten digits; closed curves to six, since the closure is left out where it is below 3e-7."""
     coordinates = draws(combination)
     curve = evaluate(coordinates, T, reference)
+    closed = {"roll-over", "power mean", "fermi"} & set(combination.mechanisms)
+    tolerance = 1e-6 if closed else 1e-10
     for row, vector in enumerate(coordinates):
         expected = by_laws(vector, combination, T, reference)
         for name, part in expected.items():
             found = np.broadcast_to(curve.parts[name], curve.total.shape)[row]
-            np.testing.assert_allclose(found, part, rtol=1e-10, atol=1e-13, err_msg=name)
-        np.testing.assert_allclose(curve.total[row], sum(expected.values()), rtol=1e-10)
+            np.testing.assert_allclose(found, part, rtol=tolerance, atol=1e-13, err_msg=name)
+        size = sum(np.abs(part) for part in expected.values())
+        np.testing.assert_allclose(curve.total[row] / size, sum(expected.values()) / size, atol=tolerance)
 
 
 @every_combination
@@ -223,8 +227,8 @@ def test_fermi_form_is_the_closure_with_its_own_prefactor_as_background():
     prefactor = np.exp(log_prefactor(tied, REFERENCE))[0]
     free = one("activation + power mean", gap_K=np.log(4.0), background=np.log(prefactor), sharpness=0.0)
     expected = fermi(T, 4.0, prefactor / 2)
-    np.testing.assert_allclose(evaluate(tied, T, REFERENCE).total[0], expected, rtol=1e-12)
-    np.testing.assert_allclose(evaluate(free, T, REFERENCE).total[0], expected, rtol=1e-12)
+    np.testing.assert_allclose(evaluate(tied, T, REFERENCE).total[0], expected, rtol=1e-6)
+    np.testing.assert_allclose(evaluate(free, T, REFERENCE).total[0], expected, rtol=1e-6)
 
 
 def test_amplitudes_are_the_readings_at_the_reference_temperatures():

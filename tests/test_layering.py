@@ -47,6 +47,7 @@ BANDS: dict[str, tuple[str, ...]] = {
         "optimise",
         "posterior",
         "diagnostics",
+        "tempering",
         "explore",
         "sampling",
         "averaging",
