@@ -18,7 +18,7 @@ from gapfit.errors import GapfitError, InputError
 
 __all__ = ["app", "main"]
 
-WRONG_INPUT, NOT_CONVERGED = 1, 3
+WRONG_INPUT, NOT_CONVERGED, STOPPED = 1, 3, 130
 
 app = typer.Typer(
     help="Activation gaps of quantum Hall states: raw sweeps in, gaps with credible intervals out.",
@@ -45,9 +45,6 @@ def main() -> None:
     except GapfitError as error:
         typer.echo(f"gapfit: {error}", err=True)
         sys.exit(WRONG_INPUT)
-    except KeyboardInterrupt:
-        typer.echo("gapfit: stopped; the same command goes on from the fillings that are done", err=True)
-        sys.exit(130)
 
 
 @app.callback()
@@ -99,7 +96,7 @@ def fit(
 
     loaded = load_study(study)
     folder = out or loaded.folder / "results"
-    with _progress(quiet) as told:
+    with _stoppable(), _progress(quiet) as told:
         result = fit_study(
             loaded,
             folder,
@@ -246,6 +243,16 @@ def _print_columns(rows: Sequence[dict[str, Any]]) -> None:
     widths = [max(len(line[index]) for line in cells) for index in range(len(heads))]
     for line in cells:
         typer.echo("  ".join(cell.ljust(width) for cell, width in zip(line, widths, strict=True)).rstrip())
+
+
+@contextmanager
+def _stoppable() -> Iterator[None]:
+    """Say what is left of a run that the user stops."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        typer.echo("gapfit: stopped; the same command goes on from the fillings that are done", err=True)
+        raise typer.Exit(STOPPED) from None
 
 
 @contextmanager
