@@ -213,7 +213,7 @@ def test_exit_codes_are_the_ones_of_the_code():
     from gapfit import cli
 
     stated = {int(cells[0]) for cells in rows(section("Commands")) if cells[0].isdigit()}
-    assert stated == {0, cli.WRONG_INPUT, 2, cli.NOT_CONVERGED}
+    assert stated == {0, cli.WRONG_INPUT, 2, cli.NOT_CONVERGED, cli.STOPPED}
 
 
 def test_names_of_the_interface_exist():
