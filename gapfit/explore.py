@@ -29,11 +29,11 @@ __all__ = ["Explored", "Mixture", "explore"]
 FloatArray = NDArray[np.float64]
 
 DEGREES = 6.0
-N_START = 8
+N_START = 6
 N_MODE = 3
 NEGLIGIBLE = 9.0
 QUICK_DRAWS = 600
-MATTERS = 0.01
+MATTERS = 0.02
 """Share of the average from which a combination is looked at thoroughly."""
 
 N_PARTICLE = 500

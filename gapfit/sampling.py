@@ -50,7 +50,7 @@ class SamplingRules:
         Effective sample size, of bulk and tails, that it must reach.
     """
 
-    n_walker: int = 128
+    n_walker: int = 80
     n_from_modes: int = 1
     warm_up: int = 50
     max_steps: int = 1600
@@ -158,10 +158,10 @@ def _fitted(draws: FloatArray, rng: np.random.Generator) -> Mixture:
 
 
 BLIND = 1
-N_PARTICLE = 1000
-MOVES_A_STAGE = 4.0
+N_PARTICLE = 600
+MOVES_A_STAGE = 3.0
 ADAPTING_DRAWS = 3000
-N_COMPONENT = 6
+N_COMPONENT = 5
 
 
 def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess: float) -> Chains:

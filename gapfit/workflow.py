@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import multiprocessing
 import os
+import signal
 import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
@@ -42,7 +43,7 @@ __all__ = ["Progress", "StudyResult", "find_minima", "fit_study", "simulate_stud
 Progress = Callable[[int, int, str], None]
 """Called with steps done, steps in all, and what was done last."""
 
-ACROSS_OFFSETS = (-0.6, -0.3, 0.3, 0.6)
+ACROSS_OFFSETS = (-0.5, 0.5)
 """Where the gap across a minimum is read, in half-widths of the minimum (own choice)."""
 
 THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
@@ -349,12 +350,17 @@ def _pool(jobs: int, n_task: int) -> Iterator[Callable[..., _Pending]]:
     for name in THREADS:
         os.environ.setdefault(name, "1")
     context = multiprocessing.get_context("spawn")
-    with ProcessPoolExecutor(min(jobs, n_task), mp_context=context) as pool:
+    with ProcessPoolExecutor(min(jobs, n_task), mp_context=context, initializer=_stop_quietly) as pool:
         try:
             yield pool.submit
         except BaseException:
             pool.shutdown(wait=False, cancel_futures=True)
             raise
+
+
+def _stop_quietly() -> None:
+    """Let an interrupt of the keyboard end a process of the pool without a traceback of its own."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
 
 
 @dataclass(frozen=True)
