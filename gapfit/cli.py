@@ -41,21 +41,30 @@ def main() -> None:
     for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
         os.environ.setdefault(name, "1")
     try:
-        app()
+        app(prog_name="gapfit")
     except GapfitError as error:
         typer.echo(f"gapfit: {error}", err=True)
         sys.exit(WRONG_INPUT)
 
 
-@app.callback()
-def _root(
-    version: Annotated[bool, typer.Option("--version", help="Print the version and leave.")] = False,
-) -> None:
-    if version:
+def _print_version(wanted: bool) -> None:
+    if wanted:
         from gapfit import __version__
 
         typer.echo(__version__)
         raise typer.Exit
+
+
+@app.callback()
+def _root(
+    version: Annotated[
+        bool,
+        typer.Option(
+            "--version", help="Print the version and leave.", is_eager=True, callback=_print_version
+        ),
+    ] = False,
+) -> None:
+    """Take the options that belong to no command."""
 
 
 @app.command()
