@@ -20,7 +20,7 @@ from gapfit.mechanisms import (
 )
 from gapfit.posterior import make_problem, one_window
 from gapfit.units import VON_KLITZING_OHM
-from gapfit.verdict import predictive_p, rises_on_cooling
+from gapfit.verdict import judge, predictive_p, rises_on_cooling
 
 FEW = tuple(
     map(
@@ -108,6 +108,36 @@ def test_a_leak_that_masks_the_gap_bounds_it_from_below(simulate_readings):
     assert "masked by hopping or leak" in record.cause
     assert 1.0 < record.gap_lower95_K < 8.0
     assert f"above {record.gap_lower95_K:.3g} K" in record.sentence
+
+
+def judged_rows(series, text, gaps, prefactor, **coordinates):
+    """Verdict on draws of given gaps and one prefactor."""
+    problem = make_problem(series, one_window(series))
+    combination = parse_combination(text)
+    rows = np.repeat(combination.base[None], len(gaps), axis=0)
+    rows[:, SLOT["gap_K"]] = np.log(gaps)
+    rows[:, SLOT["activated"]] = np.log(prefactor) - gaps / (2 * problem.reference.high_K)
+    for name, number in coordinates.items():
+        rows[:, SLOT[name]] = number
+    part = CombinationDraws(combination, rows, np.full(len(gaps), 1 / len(gaps)), 0.0)
+    draws = draw_members(problem, [part], AveragingRules(), np.random.default_rng(0), len(gaps))
+    return judge(problem, draws, AveragingRules())
+
+
+def test_limit_comes_from_draws_whose_activation_is_too_small_to_see(simulate_readings):
+    """Every draw is masked, so none is activated; the limit is the 5 % point of their gaps."""
+    series = simulate_readings(lambda t: 400 + 0 * t, seed=1, error_source="trace")
+    gaps = np.linspace(6.0, 9.0, 1000)
+    record = judged_rows(series, "activation + leak", gaps, 5000.0, leak=np.log(400.0))
+    assert record.p_activated == 0.0
+    assert record.gap_lower95_K == pytest.approx(np.quantile(gaps, 0.05), rel=1e-3)
+
+
+def test_a_prefactor_too_small_bounds_nothing(simulate_readings):
+    series = simulate_readings(lambda t: activation(t, 3.0, 100.0), seed=1)
+    record = judged_rows(series, "activation", np.linspace(2.9, 3.1, 1000), 100.0)
+    assert record.name == "no activated regime"
+    assert np.isnan(record.gap_lower95_K)
 
 
 def test_an_activated_curve_has_no_limit(truly_activated):
