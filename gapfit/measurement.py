@@ -67,7 +67,7 @@ class Measurement:
             {
                 "route": route.name,
                 f"value ({unit})": f"{route.value * scale:.5g}",
-                "standard error": f"{route.error * scale:.2g}",
+                "standard error": f"{route.error * scale:.2g}" if np.isfinite(route.error) else "unknown",
                 "places used": route.n_used,
             }
             for route in self.density.routes

@@ -136,6 +136,8 @@ def find_minima(study: Study, out: str | Path | None = None) -> Measurement:
     GapfitError
         As `gapfit.measurement.measure`.
     """
+    if out is not None:
+        _refuse_inputs(study, Path(out) / "series.csv")
     measurement = measure(study)
     if out is not None:
         folder = Path(out)
@@ -198,6 +200,8 @@ def fit_study(
     """
     started = time.monotonic()
     folder = None if out is None else ResultFolder(out)
+    if folder is not None:
+        _refuse_inputs(study, folder.path)
     measurement = measure(study)
     settings = fit_settings(study, engine, seed)
     names = series_names(measurement.series)
@@ -215,6 +219,15 @@ def fit_study(
             folder.finish()
             result = replace(result, folder=folder.path)
     return result
+
+
+def _refuse_inputs(study: Study, place: Path) -> None:
+    """Refuse to write where an input lies, which would be lost."""
+    for file in study.files:
+        if file.resolve().is_relative_to(place.resolve()):
+            raise InputError(
+                f"{file} is read by this study and would be overwritten; name another folder with --out"
+            )
 
 
 # ------------------------------------------------------------------------------------------- one series
