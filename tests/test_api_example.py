@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import re
+from pathlib import Path
+
 import numpy as np
 import pytest
 from command_line import TRUTH, series_study
@@ -88,3 +91,13 @@ def test_every_public_name_is_there():
         assert name in dir(gapfit)
     with pytest.raises(AttributeError, match="no attribute 'gapfitt'"):
         _ = gapfit.gapfitt
+
+
+def test_python_of_the_readme_runs(tmp_path, monkeypatch, capsys):
+    readme = Path(__file__).parent.parent / "README.md"
+    examples = re.findall(r"```python\n(.*?)```", readme.read_text(encoding="utf-8"), re.DOTALL)
+    assert len(examples) >= 2
+    monkeypatch.chdir(series_study(tmp_path / "study", ["1/3"]))
+    for example in examples:
+        exec(compile(example, "README.md", "exec"), {"__name__": "__main__"})
+    assert "activated" in capsys.readouterr().out

@@ -41,6 +41,12 @@ def refused(folder: Path, *needles: str, command: str = "fit") -> str:
     return ran.err
 
 
+def _guessed_errors(folder: Path) -> None:
+    head, *rows = (folder / MINIMA).read_text().splitlines()
+    text = "\n".join([f"{head},error_source", *(f"{row},guess" for row in rows)])
+    (folder / MINIMA).write_text(text + "\n")
+
+
 def mixed(rows: list[str]) -> list[str]:
     return random.Random(1).sample(rows, len(rows))
 
@@ -124,6 +130,10 @@ IN_SERIES: dict[str, tuple[Change, tuple[str, ...]]] = {
     "filling that the file lacks": (
         swap(STUDY, "[fit]", '[fillings]\nlook_for = ["3/7"]\n[fit]'),
         ("filling 3/7 is looked for", "which has 1/3, 2/5, 1"),
+    ),
+    "unknown source of errors": (
+        _guessed_errors,
+        ("row 2, column 'error_source'", "found 'guess'", "allowed are stated, trace, assumed"),
     ),
     "too long a row below the heading": (
         swap(MINIMA, "\n1/3,", "\n1/3,9,9,"),

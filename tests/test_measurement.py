@@ -14,6 +14,7 @@ from gapfit.errors import InputError
 from gapfit.hall import field_at_filling
 from gapfit.measurement import fit_settings, measure
 from gapfit.study import load_study
+from gapfit.workflow import find_minima
 
 DEMOS = Path(__file__).parent.parent / "datasets_synthetic"
 
@@ -84,6 +85,18 @@ def test_errors_of_the_thermometer_reach_the_series(tmp_path):
     text = SERIES_STUDY.replace("scale_error = 0.01", "relative_error = 0.01")
     series = measure(load_study(series_study(tmp_path / "s", text=text))).series[0]
     assert series.temperature_error == pytest.approx(np.hypot(0.01, 0.002) * series.temperature, rel=1e-3)
+
+
+def test_temperature_errors_of_a_recorded_series_are_not_widened_again(tmp_path):
+    text = SERIES_STUDY.replace("scale_error = 0.01", "relative_error = 0.01")
+    study = load_study(series_study(tmp_path / "s", text=text))
+    recorded = find_minima(study, tmp_path / "out").series
+    (tmp_path / "s/minima.csv").write_bytes((tmp_path / "out/series.csv").read_bytes())
+    again = measure(study).series
+    for one, same in zip(again, recorded, strict=True):
+        assert (one.temperature_error == same.temperature_error).all()
+        assert one.error_source == "stated"
+        assert one.flags == same.flags
 
 
 def test_settings_of_the_study_and_what_overrides_them(tmp_path):

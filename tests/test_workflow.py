@@ -289,6 +289,19 @@ def test_folders_of_others_are_refused_untouched(study_folder, tmp_path):
     assert not list(tmp_path.parent.glob(f".{tmp_path.name}*"))
 
 
+def test_inputs_are_never_overwritten(first, tmp_path):
+    folder = series_study(tmp_path / "study", text=SERIES_STUDY.replace("minima.csv", "out/series.csv"))
+    (folder / "out").mkdir()
+    for name in ("series.csv", "run.json"):
+        (folder / "out" / name).write_bytes((first / name).read_bytes())
+    before = contents(tmp_path)
+    for command in ("fit", "minima"):
+        ran = run(command, folder, "--out", folder / "out")
+        assert ran.code == 1
+        assert "series.csv is read by this study and would be overwritten" in ran.err
+    assert contents(tmp_path) == before
+
+
 def test_no_process_is_no_way(study):
     with pytest.raises(InputError, match="at least one process"):
         fit_study(study, jobs=0)
