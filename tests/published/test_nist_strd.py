@@ -235,7 +235,7 @@ def test_mgh10_in_logarithms_of_the_parameters_is_solved_from_either_start(start
 
 
 def test_a_fit_of_logarithms_of_the_readings_is_another_fit():
-    """Fitted in ln y, b2 of MGH10 is 6148.78 (computed), 1.4 certified deviations from the certified value."""
+    """Fitted in ln y, b2 of MGH10 is 6148.78 (computed), 1.4 certified deviations off the certified one."""
     data = DATASETS["MGH10"]
     objective = least_squares_objective(in_logarithms(data, log_readings=True))
     logarithmic = minimise(objective, np.log([data.second_start]), tolerance=1e-16, max_iterations=400)
