@@ -17,7 +17,7 @@ __all__ = ["fast_diagnostics", "fast_draws", "sampled_draws"]
 
 FloatArray = NDArray[np.float64]
 
-CARRIES_WEIGHT = 0.1
+CARRIES_WEIGHT = 0.15
 """Share of the average from which a combination is sampled; the others keep the draws of the fast engine."""
 
 SMALLEST_FAST_ESS = 400.0

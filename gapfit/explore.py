@@ -36,8 +36,8 @@ QUICK_DRAWS = 600
 MATTERS = 0.02
 """Share of the average from which a combination is looked at thoroughly."""
 
-N_PARTICLE = 500
-N_COMPONENT, N_FIT_STEP = 6, 10
+N_PARTICLE = 400
+N_COMPONENT, N_FIT_STEP = 5, 8
 FIRST_DRAWS, FINAL_DRAWS = 1200, 2500
 EXTRA_ROUNDS = 2
 GOOD_PARETO_K = 0.6
@@ -223,6 +223,7 @@ def explore(
     combinations: Sequence[Combination],
     log_prior: FloatArray,
     rng: np.random.Generator,
+    thorough: bool = True,
 ) -> tuple[Explored, ...]:
     """Posteriors and evidences of the combinations that matter.
 
@@ -233,6 +234,8 @@ def explore(
     log_prior : ndarray[n_combination]
         Log prior weights of the combinations.
     rng : numpy.random.Generator
+    thorough : bool
+        Whether to look again at those that carry weight; without, medians are good and tails rough.
 
     Returns
     -------
@@ -254,7 +257,9 @@ def explore(
     weight = np.array([item.log_evidence for _, item in quick]) + log_prior[[index for index, _ in quick]]
     share = np.exp(weight - np.logaddexp.reduce(weight))
     return tuple(
-        _thorough(LogPosterior(problem, combinations[index]), modes[index], rng) if part > MATTERS else item
+        _thorough(LogPosterior(problem, combinations[index]), modes[index], rng)
+        if thorough and part > MATTERS
+        else item
         for part, (index, item) in zip(share, quick, strict=True)
     )
 

@@ -65,6 +65,8 @@ class FitSettings:
         n of the electron temperature.
     thermometer_scale_error : float
         Relative error of the thermometer common to the cool-down.
+    thorough : bool
+        False makes the fast engine quicker, with good medians and rough tails, for surveys of many series.
     rules : AveragingRules
     seed : int
     """
@@ -76,6 +78,7 @@ class FitSettings:
     hopping_power: float = 1.0
     saturation_exponent: float = 4.0
     thermometer_scale_error: float = 0.0
+    thorough: bool = True
     rules: AveragingRules = field(default_factory=AveragingRules)
     seed: int = 0
 
@@ -349,7 +352,9 @@ def fit_temperature_series(series: TemperatureSeries, settings: FitSettings) -> 
     problem = _problem(series, settings)
     explore_seed, mcmc_seed, draw_seed = _seeds(series, settings)
     log_prior = combination_log_prior(combinations, settings.rules.nuisance_penalty)
-    explored = explore(problem, combinations, log_prior, np.random.default_rng(explore_seed))
+    explored = explore(
+        problem, combinations, log_prior, np.random.default_rng(explore_seed), settings.thorough
+    )
     prior_of = dict(zip(combinations, log_prior, strict=True))
     fast = [fast_draws(problem, item, prior_of[item.combination]) for item in explored]
     posteriors, diagnostics = fast, fast_diagnostics(fast, explored)

@@ -341,7 +341,7 @@ _WORDS = {
 _NEEDS_ACTIVATION = {"roll-over", "power mean", "fermi", "spread", "nearest"}
 _CARRIERS = {"activation", "es", "mott", "constant", "power law"}
 _EXCLUSIVE = (
-    {"roll-over", "fermi"},
+    {"roll-over", "power mean", "fermi"},
     {"es", "mott"},
     {"leak", "offset"},
     {"constant", "power law", "activation"},

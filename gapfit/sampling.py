@@ -158,10 +158,10 @@ def _fitted(draws: FloatArray, rng: np.random.Generator) -> Mixture:
 
 
 BLIND = 1
-N_PARTICLE = 600
-MOVES_A_STAGE = 3.0
+N_PARTICLE = 400
+MOVES_A_STAGE = 2.5
 ADAPTING_DRAWS = 3000
-N_COMPONENT = 5
+N_COMPONENT = 4
 
 
 def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess: float) -> Chains:
@@ -186,8 +186,8 @@ def _moves(proposal: Mixture) -> list[tuple[emcee.moves.Move, float]]:
         offered = rng.permutation(proposal.sample(len(position), rng))
         return offered, proposal.log_density(position) - proposal.log_density(offered)
 
-    local = [(emcee.moves.StretchMove(), 0.1), (emcee.moves.DEMove(), 0.3)]
-    return [(emcee.moves.MHMove(jump), 0.6), *local]
+    local = [(emcee.moves.StretchMove(), 0.05), (emcee.moves.DEMove(), 0.2)]
+    return [(emcee.moves.MHMove(jump), 0.75), *local]
 
 
 def _around_modes(explored: Explored, n_walker: int, rng: np.random.Generator) -> FloatArray:

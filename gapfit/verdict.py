@@ -8,7 +8,6 @@ import numpy as np
 from scipy.special import gammaincc
 
 from gapfit.averaging import AveragingRules, MemberDraws
-from gapfit.mechanisms import SLOT
 from gapfit.posterior import Problem
 from gapfit.series import TemperatureSeries
 
@@ -127,9 +126,7 @@ def predictive_p(problem: Problem, draws: MemberDraws) -> float:
     chosen = np.flatnonzero(wide[draws.window])
     if chosen.size == 0:
         return float("nan")
-    coordinates = draws.coordinates[chosen].copy()
-    coordinates[:, SLOT["inflation"]] = 0.0
-    curve = problem.curve(coordinates)
+    curve = problem.curve(draws.coordinates[chosen])
     sigma = np.hypot(series.error, curve.slope * series.temperature_error / series.temperature)
     kept = windows.kept[draws.window[chosen]]
     squares = np.sum(kept * ((series.value - curve.total) / sigma) ** 2, axis=1)

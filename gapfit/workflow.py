@@ -38,6 +38,8 @@ from gapfit.study import Study, study_as_dict
 if TYPE_CHECKING:
     import pandas as pd
 
+    from gapfit.digest import WholeRange
+
 __all__ = ["Progress", "StudyResult", "find_minima", "fit_study", "simulate_study"]
 
 Progress = Callable[[int, int, str], None]
@@ -255,6 +257,7 @@ class _Done:
     fit: GapFit
     across: tuple[tuple[float, GapFit], ...]
     drawn: dict[str, str]
+    alone: WholeRange | None
 
 
 class _Pending(Protocol):
@@ -316,13 +319,22 @@ def _fit_one(task: _Task) -> _Done:
             save_fit(fit, task.stored)
     across = _fit_across(fit, task)
     drawn: dict[str, str] = {}
+    alone = None
     if task.folder is not None:
+        alone = _whole_range(fit)
         write_posterior(fit, task.folder / "posterior" / f"{task.name}.nc")
         if task.figures:
             from gapfit.gallery import draw_filling
 
             drawn = draw_filling(fit, task.folder / "figures", task.name)
-    return _Done(task.title, fit, across, drawn)
+    return _Done(task.title, fit, across, drawn, alone)
+
+
+def _whole_range(fit: GapFit) -> WholeRange | None:
+    """The gap without averaging, for the report."""
+    from gapfit.digest import whole_range
+
+    return whole_range(fit)
 
 
 def _stored_fit(path: Path | None) -> GapFit | None:
@@ -340,7 +352,7 @@ def _fit_across(fit: GapFit, task: _Task) -> tuple[tuple[float, GapFit], ...]:
     """Gaps beside the exact filling, by the fast engine with the likeliest combination."""
     if fit.verdict != "activated" or not task.beside:
         return ()
-    settings = replace(task.settings, engine="fast", combinations=(fit.best[0],))
+    settings = replace(task.settings, engine="fast", combinations=(fit.best[0],), thorough=False)
     sides = [(offset, fit_temperature_series(series, settings)) for offset, series in task.beside]
     return tuple(sorted([*sides, (0.0, fit)], key=lambda pair: pair[0]))
 
@@ -400,13 +412,12 @@ def _record(
     figures: bool,
 ) -> None:
     """Write everything but the figures and posteriors of single fillings, which are there already."""
-    from gapfit.digest import whole_range
     from gapfit.report import ReportContent, render_report
     from gapfit.tables import write_gaps_csv, write_gaps_json
     from gapfit.typeset import write_tables
 
     place, study, frame = folder.building, result.study, result.gaps
-    alone = [whole_range(fit) for fit in result.fits]
+    alone = [one.alone for one in done]
     write_gaps_csv(frame, place / "gaps.csv")
     write_gaps_json(frame, result.fits, place / "gaps.json", alone)
     write_tables(frame, place)
