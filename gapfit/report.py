@@ -34,6 +34,7 @@ TABLE_COLUMNS = ("filling", "field", "gap", "interval68", "interval95", "verdict
 MEMBERS_SHOWN = 6
 CAPTIONS = {
     "gaps": "Gaps of all fillings: posterior median with 68 % and 95 % intervals; limits as arrows.",
+    "gaps_field": "The same gaps against field.",
     "trend": "Gaps against effective field.",
     "overview": "Arrhenius plots of all fillings.",
     "traces": "Traces at all temperatures, with the minima that were read.",
