@@ -63,6 +63,8 @@ class FitSettings:
         Power m of the hopping prefactor 1/T^m.
     saturation_exponent : float
         n of the electron temperature.
+    saturating : bool
+        Whether the electrons are known to stop cooling: every activated combination then includes heating.
     thermometer_scale_error : float
         Relative error of the thermometer common to the cool-down.
     thorough : bool
@@ -77,6 +79,7 @@ class FitSettings:
     noise: str = "student"
     hopping_power: float = 1.0
     saturation_exponent: float = 4.0
+    saturating: bool = False
     thermometer_scale_error: float = 0.0
     thorough: bool = True
     rules: AveragingRules = field(default_factory=AveragingRules)
@@ -392,7 +395,7 @@ def candidates(series: TemperatureSeries, settings: FitSettings) -> tuple[Combin
     """
     if settings.combinations is not None:
         return settings.combinations
-    return combinations_for(bool(np.isfinite(series.background)))
+    return combinations_for(bool(np.isfinite(series.background)), settings.saturating)
 
 
 def _problem(series: TemperatureSeries, settings: FitSettings) -> Problem:

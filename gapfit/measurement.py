@@ -250,6 +250,7 @@ def fit_settings(study: Study, engine: str | None = None, seed: int | None = Non
         return settings
     return replace(
         settings,
+        saturating=study.thermometry.electron_saturation,
         saturation_exponent=study.thermometry.saturation_exponent,
         thermometer_scale_error=study.thermometry.scale_error,
     )

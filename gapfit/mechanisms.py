@@ -438,7 +438,7 @@ def parse_combination(text: str) -> Combination:
     return Combination(tuple(part.strip() for part in text.lower().split("+")))
 
 
-def combinations_for(background_known: bool) -> tuple[Combination, ...]:
+def combinations_for(background_known: bool, saturating: bool = False) -> tuple[Combination, ...]:
     """Combinations that are averaged by default.
 
     Parameters
@@ -446,17 +446,20 @@ def combinations_for(background_known: bool) -> tuple[Combination, ...]:
     background_known : bool
         Whether the sweeps show the flanks of the minimum. The minimum must then fill in towards a known
         level, so activation without a roll-over is no candidate.
+    saturating : bool
+        Whether the electrons are known to stop cooling, so that activation without heating is no
+        candidate. How much they are heated remains a parameter.
 
     Returns
     -------
     tuple of Combination
     """
-    if not background_known:
-        return COMBINATIONS
+    needed = {"roll-over"} if background_known else set()
+    needed |= {"heating"} if saturating else set()
     return tuple(
         combination
         for combination in COMBINATIONS
-        if not combination.activated or "roll-over" in combination.mechanisms
+        if not combination.activated or needed <= set(combination.mechanisms)
     )
 
 

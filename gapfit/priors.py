@@ -146,7 +146,7 @@ def prior_at_data_scale(series: TemperatureSeries, reference: Reference) -> Prio
         "saturation": (0.0, 2.5),
         "background_slope": (0.0, 0.05)
         if np.isnan(series.background_slope)
-        else (series.background_slope, 0.01),
+        else (series.background_slope, 0.02),
         "hopping": (np.log(bottom), 2.0),
         "hopping_T0_K": (np.log(60 * middle), 1.7),
         "hopping_exponent": (0.5, 0.0),
