@@ -50,10 +50,10 @@ class SamplingRules:
         Effective sample size, of bulk and tails, that it must reach.
     """
 
-    n_walker: int = 80
+    n_walker: int = 200
     n_from_modes: int = 1
     warm_up: int = 50
-    max_steps: int = 3200
+    max_steps: int = 1600
     smallest_ess: float = SMALLEST_ESS
 
 
@@ -158,10 +158,10 @@ def _fitted(draws: FloatArray, rng: np.random.Generator) -> Mixture:
 
 
 BLIND = 1
-N_PARTICLE = 400
-MOVES_A_STAGE = 2.5
-ADAPTING_DRAWS = 3000
-N_COMPONENT = 4
+N_PARTICLE = 1000
+MOVES_A_STAGE = 4.0
+ADAPTING_DRAWS = 4000
+N_COMPONENT = 6
 
 
 def _summarise(samplers: list[emcee.EnsembleSampler], n_step: int, smallest_ess: float) -> Chains:
@@ -186,8 +186,8 @@ def _moves(proposal: Mixture) -> list[tuple[emcee.moves.Move, float]]:
         offered = rng.permutation(proposal.sample(len(position), rng))
         return offered, proposal.log_density(position) - proposal.log_density(offered)
 
-    local = [(emcee.moves.StretchMove(), 0.05), (emcee.moves.DEMove(), 0.2)]
-    return [(emcee.moves.MHMove(jump), 0.75), *local]
+    local = [(emcee.moves.StretchMove(), 0.1), (emcee.moves.DEMove(), 0.4)]
+    return [(emcee.moves.MHMove(jump), 0.5), *local]
 
 
 def _around_modes(explored: Explored, n_walker: int, rng: np.random.Generator) -> FloatArray:
