@@ -53,7 +53,7 @@ class SamplingRules:
     n_walker: int = 200
     n_from_modes: int = 1
     warm_up: int = 50
-    max_steps: int = 1600
+    max_steps: int = 3200
     smallest_ess: float = SMALLEST_ESS
 
 
