@@ -88,7 +88,7 @@ class FitSettings:
     @property
     def pinned(self) -> str:
         """What the user pinned: ``""``, ``"window"``, ``"mechanism"`` or ``"mechanism and window"``."""
-        parts = ["mechanism"] if self.combinations is not None else []
+        parts = ["mechanism"] if self.combinations is not None and len(self.combinations) == 1 else []
         parts += ["window"] if self.window is not None else []
         return " and ".join(parts)
 
@@ -230,7 +230,7 @@ class GapFit:
         )
 
     def curves(self, temperature: ArrayLike, n_draw: int = 800, best_only: bool = False) -> Curve:
-        """Curves of some posterior draws.
+        """Curves of some posterior draws; where the verdict is activated, of those with an activated regime.
 
         Parameters
         ----------
@@ -245,9 +245,11 @@ class GapFit:
         Curve
             Arrays of shape [n_draw, n_temperature].
         """
-        coordinates = self.draws.coordinates
+        shown = self.draws.activated if self.verdict == "activated" else np.ones(self.scale.size, dtype=bool)
         if best_only:
-            coordinates = coordinates[self.draws.combination == int(np.argmax(self.draws.share))]
+            best = shown & (self.draws.combination == int(np.argmax(self.draws.share)))
+            shown = best if best.any() else shown
+        coordinates = self.draws.coordinates[shown]
         chosen = np.unique(np.linspace(0, len(coordinates) - 1, min(n_draw, len(coordinates))).astype(int))
         return evaluate(coordinates[chosen], np.asarray(temperature, float), self.problem.reference)
 

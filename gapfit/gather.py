@@ -26,7 +26,7 @@ practice, no source)."""
 SAME_TEMPERATURE = 0.02
 """Readings of one group are joined where their temperatures agree to this share."""
 
-MATTERS_SIGMA, MATTERS_RELATIVE, MATTERS_SHARE = 3.0, 0.02, 0.25
+MATTERS_SIGMA, MATTERS_RELATIVE, MATTERS_SHARE = 3.0, 0.05, 0.25
 """Another kind of reading matters where it differs by so many standard errors, and by this part of the
 reading, at this share of the points."""
 
