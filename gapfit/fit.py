@@ -88,7 +88,7 @@ class FitSettings:
     @property
     def pinned(self) -> str:
         """What the user pinned: ``""``, ``"window"``, ``"mechanism"`` or ``"mechanism and window"``."""
-        parts = ["mechanism"] if self.combinations is not None and len(self.combinations) == 1 else []
+        parts = ["mechanism"] if self.combinations is not None else []
         parts += ["window"] if self.window is not None else []
         return " and ".join(parts)
 

@@ -123,7 +123,7 @@ def test_counts_and_flags() -> None:
     assert row.n_negative == 0
     assert table().n_negative[2] == int((conductivity().series.value < 0).sum()) > 0
     assert "points_excluded" in row["flags"].split(";")
-    assert not row.pinned
+    assert row.pinned  # these fits name their combinations
     pinned = replace(activated(), settings=replace(activated().settings, window=(0.2, 2.0)))
     assert gap_table([pinned]).pinned[0]
 
