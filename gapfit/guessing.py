@@ -82,9 +82,6 @@ class _Facts:
     def size(self) -> float:
         return max(abs(self.low), abs(self.high))
 
-    def in_house_units(self, value: float) -> float:
-        return value * (1.0 if self.unit is None else UNITS[self.unit].factor)
-
 
 def _facts(tables: Sequence[Table], name: str) -> _Facts:
     columns = [table.values[name][np.isfinite(table.values[name])] for table in tables]

@@ -40,9 +40,6 @@ FloatArray = NDArray[np.float64]
 MOST_COLUMNS = 5
 WIDE = 30.0
 FEWEST_DRAWS = 20
-RING: dict[str, Any] = {
-    "markersize": 5.5, "markerfacecolor": "none", "color": "#d62300", "markeredgewidth": 1.2,
-}  # fmt: skip
 IMPORTANCE = (
     "gap_K", "hopping_T0_K", "electron_T0_K", "leak", "offset", "background", "hopping", "level", "power",
     "nearest", "spread", "sharpness", "inflation",

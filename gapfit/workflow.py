@@ -321,20 +321,15 @@ def _fit_one(task: _Task) -> _Done:
     drawn: dict[str, str] = {}
     alone = None
     if task.folder is not None:
-        alone = _whole_range(fit)
+        from gapfit.digest import whole_range
+
+        alone = whole_range(fit)
         write_posterior(fit, task.folder / "posterior" / f"{task.name}.nc")
         if task.figures:
             from gapfit.gallery import draw_filling
 
             drawn = draw_filling(fit, task.folder / "figures", task.name)
     return _Done(task.title, fit, across, drawn, alone)
-
-
-def _whole_range(fit: GapFit) -> WholeRange | None:
-    """The gap without averaging, for the report."""
-    from gapfit.digest import whole_range
-
-    return whole_range(fit)
 
 
 def _stored_fit(path: Path | None) -> GapFit | None:
